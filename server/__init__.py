@@ -1,0 +1,1 @@
+"""The web server, the command line and the engine that carries studies out."""

@@ -1,0 +1,119 @@
+"""The application: everything put together."""
+
+import logging
+from collections.abc import AsyncIterator
+from contextlib import asynccontextmanager
+from functools import partial
+
+from fastapi import FastAPI, Request
+from fastapi.exceptions import RequestValidationError
+from fastapi.responses import JSONResponse
+from starlette.exceptions import HTTPException
+from starlette.middleware.gzip import GZipMiddleware
+
+from server.access import Gate
+from server.engine import Engine
+from server.errors import ServerError, error_response
+from server.lifecycle import IllegalTransition
+from server.middleware import SECURITY_HEADERS, BodyLimit, SecurityHeaders
+from server.routes import overlay, pages, runs, sessions, system
+from server.runs import Runs
+from server.schemas import ErrorBody
+from server.sessions import Sessions
+from server.settings import Settings
+from server.storage import Storage
+from server.stream import Board
+from server.validation import first_problem
+from solver.experiment import Study
+from solver.study import prepare
+
+_log = logging.getLogger("crossdip")
+
+_HTTP_CODES = {404: "not_found", 405: "method_not_allowed"}
+_HTTP_MESSAGES = {
+    404: "there is nothing at this address: see /openapi.json for what there is",
+    405: "this address does not take this method: see /openapi.json",
+}
+_ERRORS: dict[int | str, dict[str, object]] = {
+    "4XX": {"model": ErrorBody, "description": "What was wrong, where, and what to do"},
+    "5XX": {"model": ErrorBody, "description": "The server's fault"},
+}
+
+
+def create_app(settings: Settings, storage: Storage | None = None) -> FastAPI:
+    """The server of one data folder, not yet started."""
+    settings.data.mkdir(parents=True, exist_ok=True)
+    database = storage or Storage(settings.data / "crossdip.sqlite3")
+
+    @asynccontextmanager
+    async def lifespan(app: FastAPI) -> AsyncIterator[None]:
+        engine = Engine(settings.workers, settings.data / "scratch", settings.cluster)
+        board = Board()
+        all_runs = Runs(database, engine, board, settings)
+        app.state.engine = engine
+        app.state.board = board
+        app.state.runs = all_runs
+        app.state.sessions = Sessions(database, all_runs)
+        engine.start(partial(prepare, Study()))
+        await all_runs.open()
+        try:
+            yield
+        finally:
+            board.close()
+            await all_runs.close()
+            await engine.stop()
+            database.close()
+
+    app = FastAPI(
+        title="Crossdip",
+        description="Polarization domains of partially coherent waves: runs, results, sessions.",
+        version="0.1.0",
+        lifespan=lifespan,
+        # The interactive pages load scripts from elsewhere; the description itself is enough.
+        docs_url=None,
+        redoc_url=None,
+        responses=_ERRORS,
+    )
+    app.state.settings = settings
+    _handle_errors(app)
+    for module in (runs, sessions, overlay, system, pages):
+        app.include_router(module.router)
+    pages.mount(app)
+    # The last one added is the outermost.
+    app.add_middleware(GZipMiddleware, minimum_size=1000, compresslevel=5)
+    app.add_middleware(Gate, settings=settings, storage=database)
+    app.add_middleware(BodyLimit)
+    app.add_middleware(SecurityHeaders)
+    return app
+
+
+def _handle_errors(app: FastAPI) -> None:
+    @app.exception_handler(ServerError)
+    async def expected(request: Request, error: ServerError) -> JSONResponse:
+        return error_response(error)
+
+    @app.exception_handler(IllegalTransition)
+    async def illegal(request: Request, error: IllegalTransition) -> JSONResponse:
+        conflict = ServerError(str(error))
+        conflict.status, conflict.code = 409, "conflict"
+        return error_response(conflict)
+
+    @app.exception_handler(RequestValidationError)
+    async def invalid(request: Request, error: RequestValidationError) -> JSONResponse:
+        root = Study if request.url.path == "/api/runs" and request.method == "POST" else None
+        return error_response(first_problem(error.errors(), root))
+
+    @app.exception_handler(HTTPException)
+    async def http(request: Request, error: HTTPException) -> JSONResponse:
+        status = error.status_code
+        failure = ServerError(_HTTP_MESSAGES.get(status, str(error.detail)))
+        failure.status, failure.code = status, _HTTP_CODES.get(status, "bad_request")
+        return error_response(failure, dict(error.headers or {}))
+
+    @app.exception_handler(Exception)
+    async def unexpected(request: Request, error: Exception) -> JSONResponse:
+        _log.error("%s %s", request.method, request.url.path, exc_info=error)
+        return error_response(
+            ServerError("the server made a mistake; its log has the details. Try again"),
+            SECURITY_HEADERS,
+        )

@@ -1,0 +1,213 @@
+"""Where tasks are executed: the only module that knows Dask.
+
+By default the engine starts its own cluster: single-threaded worker processes on loopback,
+reached through temporary TLS credentials so that nobody else on the machine can submit code.
+With an address it joins a scheduler anywhere instead, and comes back when that one does.
+"""
+
+import asyncio
+import concurrent.futures
+import contextlib
+import importlib
+import itertools
+import logging
+import os
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any, Literal
+
+from server.errors import ServerError
+
+Condition = Literal["starting", "ready", "lost"]
+
+_log = logging.getLogger("crossdip.engine")
+_counter = itertools.count()
+_THREAD_CAPS = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "NUMBA_NUM_THREADS")
+_WATCH_INTERVAL_S = 0.5
+_RETRY_INTERVAL_S = 2.0
+
+
+class EngineError(ServerError):
+    """The engine cannot take or finish work."""
+
+    status = 503
+    code = "engine"
+
+
+class Engine:
+    """Runs pure functions on worker processes; survives losing a worker or the scheduler."""
+
+    def __init__(self, workers: int, scratch: Path, cluster: str = "") -> None:
+        self._wanted_workers = workers
+        self._scratch = scratch
+        self._address = cluster
+        self._cluster: Any = None
+        self._client: Any = None
+        self._ready = asyncio.Event()
+        self._keeper: asyncio.Task[None] | None = None
+        self._stopped = False
+        self.condition: Condition = "starting"
+        self.tasks_done = 0
+
+    @property
+    def workers(self) -> int:
+        """Worker processes present now."""
+        if self._client is None or not self._ready.is_set():
+            return 0
+        if self._cluster is not None:
+            return len(self._cluster.scheduler.workers)
+        return len(self._client.scheduler_info(n_workers=-1)["workers"])
+
+    def start(self, warm: Callable[[], object] | None = None) -> None:
+        """Bring the workers up in the background; ``warm`` is run once on each of them."""
+        self._keeper = asyncio.create_task(self._keep(warm), name="engine")
+
+    async def stop(self) -> None:
+        """End the workers this engine started; a foreign cluster is only left."""
+        self._stopped = True
+        self._ready.clear()
+        if self._keeper is not None:
+            self._keeper.cancel()
+            with contextlib.suppress(asyncio.CancelledError):
+                await self._keeper
+        with contextlib.suppress(Exception):
+            await self._disconnect()
+        if self._cluster is not None:
+            with contextlib.suppress(Exception):
+                await self._cluster.close(timeout=1.5)
+
+    async def run(self, function: Callable[..., Any], *args: Any, priority: int = 0) -> Any:
+        """The function's value, computed by some worker; larger priorities go first.
+
+        The function must be pure: it is executed again when a worker or the scheduler is lost.
+        Cancelling the caller withdraws the task.
+        """
+        while True:
+            await self._ready.wait()
+            client = self._client
+            future = client.submit(
+                function, *args, key=f"crossdip-{next(_counter)}-{os.getpid()}",
+                priority=priority, pure=False,
+            )  # fmt: skip
+            try:
+                value = await future
+            except asyncio.CancelledError:
+                raise
+            except (concurrent.futures.CancelledError, OSError) as error:
+                if isinstance(error, OSError) and client.status == "running":
+                    raise
+                # The scheduler went away; the keeper clears _ready until it is back.
+                await asyncio.sleep(_WATCH_INTERVAL_S)
+            except Exception as error:
+                if type(error).__name__ == "KilledWorker":
+                    raise EngineError(
+                        "The same task ended its worker again and again, most likely for want of "
+                        "memory: use fewer samples, or start the server with fewer --workers."
+                    ) from error
+                raise
+            else:
+                self.tasks_done += 1
+                return value
+            finally:
+                # Dropping the last reference is what cancels a task that has not begun.
+                future.release()
+
+    async def _keep(self, warm: Callable[[], object] | None) -> None:
+        """Connect, watch, connect again, until stopped."""
+        while True:
+            try:
+                await self._connect(warm)
+            except asyncio.CancelledError:
+                raise
+            except Exception as error:
+                if not self._address:
+                    _log.exception("the local workers did not start")
+                else:
+                    _log.warning("no scheduler at %s: %s", self._address, error)
+                self.condition = "lost"
+                with contextlib.suppress(Exception):
+                    await self._disconnect()
+                await asyncio.sleep(_RETRY_INTERVAL_S)
+                continue
+            while self._client.status in {"running", "connecting"}:
+                connected = self._client.status == "running"
+                self.condition = "ready" if connected else "lost"
+                if connected:
+                    self._ready.set()
+                else:
+                    self._ready.clear()
+                await asyncio.sleep(_WATCH_INTERVAL_S)
+            self._ready.clear()
+            self.condition = "lost"
+            with contextlib.suppress(Exception):
+                await self._disconnect()
+
+    async def _connect(self, warm: Callable[[], object] | None) -> None:
+        for name in _THREAD_CAPS:
+            os.environ.setdefault(name, "1")
+        # The import takes a third of a second: the page is served meanwhile.
+        distributed = await asyncio.to_thread(importlib.import_module, "distributed")
+        if self._address:
+            self._client = await distributed.Client(
+                self._address, asynchronous=True, set_as_default=False, timeout=5
+            )
+        else:
+            if self._cluster is None:
+                self._cluster = await self._local_cluster(distributed)
+            self._client = await distributed.Client(
+                self._cluster, asynchronous=True, set_as_default=False
+            )
+        if warm is not None and not self._address:
+            await self._warm(warm)
+        self.condition = "ready"
+        self._ready.set()
+
+    async def _local_cluster(self, distributed: Any) -> Any:
+        dask = importlib.import_module("dask")
+        logging.getLogger("distributed").setLevel(logging.ERROR)
+        dask.config.set(
+            {
+                # A lost worker is not the task's fault; a task that kills ten in a row is.
+                "distributed.scheduler.allowed-failures": 10,
+                "distributed.nanny.pre-spawn-environ.NUMBA_NUM_THREADS": 1,
+                "distributed.admin.system-monitor.gil.enabled": False,
+                # Nothing of the cluster is to be read over HTTP, not even by this machine.
+                "distributed.scheduler.http.routes": [],
+                "distributed.worker.http.routes": [],
+            }
+        )
+        self._scratch.mkdir(parents=True, exist_ok=True)
+        return await distributed.LocalCluster(
+            n_workers=self._wanted_workers,
+            threads_per_worker=1,
+            processes=True,
+            host="127.0.0.1",
+            dashboard_address=None,
+            scheduler_kwargs={"dashboard": False, "dashboard_address": "127.0.0.1:0"},
+            asynchronous=True,
+            security=distributed.Security.temporary(),
+            local_directory=str(self._scratch),
+            preload=["server.worker"],
+            silence_logs=logging.ERROR,
+        )
+
+    async def _warm(self, warm: Callable[[], object]) -> None:
+        addresses = list(self._cluster.scheduler.workers)
+        futures = [
+            self._client.submit(warm, workers=[address], allow_other_workers=True, pure=False)
+            for address in addresses
+        ]
+        try:
+            for future in futures:
+                await future
+        except Exception:
+            # The first real task will meet the same fault and report it to a person.
+            _log.exception("warming the workers failed")
+        finally:
+            for future in futures:
+                future.release()
+
+    async def _disconnect(self) -> None:
+        client, self._client = self._client, None
+        if client is not None:
+            await client.close()
