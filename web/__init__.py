@@ -1,0 +1,1 @@
+"""Templates and static files of the page."""

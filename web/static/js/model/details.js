@@ -1,0 +1,89 @@
+// Fetches the details of the points in view, not more often than the page can show them.
+
+import { api } from "./links.js";
+import { get, getMap } from "./requests.js";
+import { keyOf } from "./run.js";
+
+const ROUND_MS = 350;
+const LONGEST_ROUND_MS = 5000;
+
+export class Details {
+  #wanted = [];
+  #mapWanted = null;
+  #timer = null;
+  #waitMs = ROUND_MS;
+  #stopped = false;
+
+  /** arrived(kind, variant, point) is called for each "detail" or "map" that came. */
+  constructor(run, arrived) {
+    this.run = run;
+    this.arrived = arrived;
+    this.fetched = new Map();
+  }
+
+  /** Keep these points' details fresh: a list of [variant, point]. */
+  want(points) {
+    this.#wanted = points;
+    this.#schedule(0);
+  }
+
+  /** Fetch the whole map of a point unless it is here already. */
+  wantMap(variant, point) {
+    this.#mapWanted = [variant, point];
+    this.#schedule(0);
+  }
+
+  /** Points have changed: fetch again those in view. */
+  stale() {
+    this.#schedule(ROUND_MS);
+  }
+
+  stop() {
+    this.#stopped = true;
+    clearTimeout(this.#timer);
+  }
+
+  #schedule(waitMs) {
+    if (this.#stopped || this.#timer !== null) return;
+    this.#timer = setTimeout(() => this.#round(), waitMs);
+  }
+
+  #missing() {
+    return this.#wanted.filter(([variant, point]) => {
+      const summary = this.run.summary(variant, point);
+      if (!summary || summary.outcome !== "completed") return false;
+      return this.fetched.get(keyOf(variant, point)) !== this.run.revision(variant, point);
+    });
+  }
+
+  async #round() {
+    let failed = false;
+    for (const [variant, point] of this.#missing()) {
+      const revision = this.run.revision(variant, point);
+      try {
+        this.run.details.set(keyOf(variant, point), await get(api.detail(this.run.id, variant, point)));
+        this.fetched.set(keyOf(variant, point), revision);
+        if (!this.#stopped) this.arrived("detail", variant, point);
+      } catch {
+        failed = true;
+      }
+    }
+    await this.#fetchMap();
+    this.#timer = null;
+    this.#waitMs = failed ? Math.min(LONGEST_ROUND_MS, 2 * this.#waitMs) : ROUND_MS;
+    if (this.#missing().length || this.#mapWanted) this.#schedule(this.#waitMs);
+  }
+
+  async #fetchMap() {
+    if (!this.#mapWanted) return;
+    const [variant, point] = this.#mapWanted;
+    this.#mapWanted = null;
+    if (this.run.maps.get(keyOf(variant, point))?.complete) return;
+    try {
+      this.run.keepMap(variant, point, await getMap(api.map(this.run.id, variant, point)));
+      if (!this.#stopped) this.arrived("map", variant, point);
+    } catch {
+      // No map is kept for this point, or not yet: the stream or a later summary brings it.
+    }
+  }
+}

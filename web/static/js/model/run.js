@@ -1,0 +1,109 @@
+// One run as the page knows it: what /view said, kept up to date by the event stream.
+
+import { Evolution, bytesOf } from "./evolution.js";
+
+export const TERMINAL = new Set(["done", "failed", "cancelled"]);
+
+export const keyOf = (variant, point) => `${variant}-${point}`;
+
+export class Run {
+  constructor(view) {
+    this.maps = new Map();
+    this.details = new Map();
+    this.revisions = new Map();
+    this.renew(view);
+  }
+
+  /** Start again from a fresh /view; maps and details already fetched stay. */
+  renew(view) {
+    const { study, sequence, axes, variants, points, live_map: liveMap, ...row } = view;
+    Object.assign(this, { row, study, sequence, axes, variants, points, liveMap });
+  }
+
+  get id() {
+    return this.row.id;
+  }
+
+  get active() {
+    return !TERMINAL.has(this.row.state);
+  }
+
+  summary(variant, point) {
+    return this.points[variant]?.[point] ?? null;
+  }
+
+  detail(variant, point) {
+    return this.details.get(keyOf(variant, point)) ?? null;
+  }
+
+  /** Take in one event; returns the point summaries that it changed. */
+  apply(type, data) {
+    if (type === "state") {
+      Object.assign(this.row, { state: data.state, message: data.message });
+    } else if (type === "progress") {
+      this.row.progress = data;
+    } else if (type === "point") {
+      for (const summary of data.points) {
+        this.points[summary.variant][summary.point] = summary;
+        const key = keyOf(summary.variant, summary.point);
+        this.revisions.set(key, this.revision(summary.variant, summary.point) + 1);
+      }
+      return data.points;
+    } else if (type === "map") {
+      this.liveMap = { variant: data.variant, point: data.point };
+      this.map(data.variant, data.point, data.columns).absorb(
+        bytesOf(data.data), data.first_row, data.rows, data.intensity_scale_w,
+      );
+    }
+    return [];
+  }
+
+  /** How often a point has changed since the page opened; tells whether a detail is stale. */
+  revision(variant, point) {
+    return this.revisions.get(keyOf(variant, point)) ?? 0;
+  }
+
+  map(variant, point, columns = this.axes.map.time_ps.length) {
+    const key = keyOf(variant, point);
+    if (!this.maps.has(key)) {
+      this.maps.set(key, new Evolution(this.axes.map.distance_km.length, columns));
+    }
+    return this.maps.get(key);
+  }
+
+  /** Take in a whole map that was fetched. */
+  keepMap(variant, point, { data, rows, columns, scale }) {
+    this.map(variant, point, columns).absorb(data, 0, rows, scale);
+  }
+
+  /** Whether there is a map for a point, here or on the server. */
+  hasMap(variant, point) {
+    const summary = this.summary(variant, point);
+    return Boolean(summary?.has_map) || this.maps.has(keyOf(variant, point));
+  }
+
+  /** The point nearest to the one asked for that has a map, the same variant first; or null. */
+  mapNear(variant, point) {
+    const order = [variant, ...this.variants.keys()];
+    for (const candidate of order) {
+      const found = this.points[candidate]
+        .map((_, index) => index)
+        .filter((index) => this.hasMap(candidate, index))
+        .sort((a, b) => Math.abs(a - point) - Math.abs(b - point));
+      if (found.length) return { variant: candidate, point: found[0] };
+    }
+    return null;
+  }
+
+  /** Points that ended in anything but a value, and points that the cap stopped. */
+  remarks() {
+    const flagged = [];
+    const capped = [];
+    for (const summary of this.points.flat()) {
+      if (!summary) continue;
+      if (summary.outcome !== "completed") flagged.push(summary);
+      else if (summary.final && !summary.target_met) capped.push(summary);
+    }
+    return { flagged, capped };
+  }
+}

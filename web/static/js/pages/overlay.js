@@ -1,0 +1,94 @@
+// Curves of any runs on one set of axes, with the parameters that differ between them.
+
+import { variantColour, variantMarker } from "../model/colour.js";
+import { api, curvesIn, pages } from "../model/links.js";
+import { get } from "../model/requests.js";
+import { brief, sweepAxis } from "../model/quantities.js";
+import { dipFigure } from "../plots/dip.js";
+import { Surface } from "../plots/surface.js";
+import { theme } from "../plots/theme.js";
+import { find, make, markerIcon, say } from "./elements.js";
+import { Legend } from "./legend.js";
+import { copyLink, openPage, powerUnit } from "./shell.js";
+
+const part = (name) => find(document, name);
+const surface = new Surface(document.querySelector('[data-plot="overlay"]'));
+const legend = new Legend(part("legend"), () => draw());
+
+let overlay = null;
+let names = [];
+
+async function load() {
+  const chosen = curvesIn(location.search);
+  part("library-link").href = pages.library(chosen);
+  part("empty").hidden = chosen.length > 0;
+  if (!chosen.length) return;
+  try {
+    overlay = await get(api.overlay(chosen));
+  } catch (refusal) {
+    say(part("fault"), refusal.message);
+    return;
+  }
+  names = overlay.curves.map(({ title, name }) => `${title}: ${name}`);
+  part("body").hidden = false;
+  legend.show(names);
+  draw();
+}
+
+function draw() {
+  const axes = overlay.curves.map(({ sweep }) => sweepAxis(sweep, powerUnit.value));
+  const [sweep] = axes;
+  const top = axes.find((axis) => axis.title !== sweep.title) ?? null;
+  const left = [];
+  const curves = overlay.curves.flatMap((curve, index) => {
+    const own = axes[index];
+    const xaxis = own.title === sweep.title ? "x" : own.title === top.title ? "x2" : null;
+    if (xaxis === null) left.push(names[index]);
+    if (xaxis === null || !legend.shows(index)) return [];
+    return [{ name: names[index], index, x: own.values, points: curve.points, xaxis }];
+  });
+  surface.draw(() => dipFigure({ curves, sweep, top }));
+  const remarks = [];
+  if (top) remarks.push(`Two parameters are swept: ${sweep.title} below, ${top.title} above.`);
+  if (left.length) remarks.push(`Not drawn, as a third parameter is swept: ${left.join("; ")}.`);
+  const flagged = overlay.curves.flatMap(({ points }) => points).filter((one) => one && one.outcome !== "completed");
+  if (flagged.length) remarks.push(`${flagged.length} flagged points are marked at the foot, not drawn as values.`);
+  say(part("remarks"), remarks.join(" "));
+  showDifferences();
+}
+
+function showDifferences() {
+  const table = part("differences");
+  const heads = overlay.curves.map((curve, index) =>
+    make("th", { scope: "col" },
+      markerIcon(variantMarker(index), variantColour(theme.name, index)),
+      make("a", { href: pages.run(curve.run) }, ` ${names[index]}`)),
+  );
+  const rows = overlay.differences.map(({ title, unit, values, path }) =>
+    make("tr", {},
+      make("th", { scope: "row", title: path }, unit ? `${title} (${unit})` : title),
+      ...values.map((value) => make("td", {}, valueText(value)))),
+  );
+  if (!rows.length) {
+    rows.push(make("tr", {}, make("td", { colspan: heads.length + 1 }, "Nothing: the curves answer the same question.")));
+  }
+  table.replaceChildren(
+    make("thead", {}, make("tr", {}, make("th", { scope: "col" }, "Parameter"), ...heads)),
+    make("tbody", {}, ...rows),
+  );
+}
+
+function valueText(value) {
+  if (value === null || value === undefined) return "none";
+  if (typeof value === "number") return brief(value, 6);
+  return typeof value === "string" ? value.replaceAll("_", " ") : JSON.stringify(value);
+}
+
+document.querySelector('[data-save="overlay"]').addEventListener("click", () => surface.save("overlay"));
+document.querySelector('[data-reset="overlay"]').addEventListener("click", () => surface.resetAxes());
+part("copy-link").addEventListener("click", copyLink);
+powerUnit.attach(part("power-unit"));
+powerUnit.addEventListener("change", () => overlay && draw());
+theme.addEventListener("change", () => overlay && showDifferences());
+openPage();
+load();

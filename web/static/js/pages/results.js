@@ -1,0 +1,252 @@
+// The results of one run: maps, the dip curve, and the plots of the point selected.
+
+import { Details } from "../model/details.js";
+import { brief, sweepAxis } from "../model/quantities.js";
+import * as figures from "../plots/curves.js";
+import { dipFigure } from "../plots/dip.js";
+import { EvolutionPlot } from "../plots/evolution.js";
+import { Surface } from "../plots/surface.js";
+import { find, findAll } from "./elements.js";
+import { Legend } from "./legend.js";
+import { Selection } from "./selection.js";
+import { fillReadout, fillRemarks, fillValues } from "./tables.js";
+import { powerUnit } from "./shell.js";
+
+const TABLES_MS = 500;
+
+export class Results {
+  #run = null;
+  #details = null;
+  #mapShown = null;
+  #tablesTimer = null;
+
+  constructor(root) {
+    this.root = root;
+    const box = (key) => root.querySelector(`[data-plot="${key}"]`);
+    const readout = find(root, "map-readout");
+    this.maps = [0, 1, 2].map((plane) => new EvolutionPlot(box(`map-${plane}`), plane, readout));
+    for (const map of this.maps) map.zoomed = (change) => this.#zoomTogether(map, change);
+    this.plots = { dip: new Surface(box("dip"), { intervalMs: 200 }) };
+    for (const key of ["cross", "auto", "spectra", "distance", "contrast", "durations"]) {
+      this.plots[key] = new Surface(box(key), { intervalMs: 400 });
+    }
+    this.legend = new Legend(find(root, "legend"), () => this.#comparisonChanged());
+    this.selection = new Selection(root, () => this.#selectionChanged());
+    powerUnit.addEventListener("change", () => this.#run && this.#drawAll());
+    for (const button of findAll(root, "save")) {
+      button.addEventListener("click", () => this.#save(button.dataset.save));
+    }
+    for (const button of findAll(root, "reset")) {
+      button.addEventListener("click", () => this.#resetAxes(button.dataset.reset));
+    }
+  }
+
+  /** Show a run, or null for none. */
+  show(run) {
+    this.#details?.stop();
+    this.#run = run;
+    this.#mapShown = null;
+    find(this.root, "empty").hidden = Boolean(run);
+    find(this.root, "body").hidden = !run;
+    if (!run) return;
+    this.#details = new Details(run, (kind, variant, point) => this.#arrived(kind, variant, point));
+    this.selection.open(run, this.sweep);
+    this.legend.show(run.variants.map(({ name }) => name), this.selection.hidden);
+    this.#drawAll();
+  }
+
+  get sweep() {
+    return sweepAxis(this.#run.axes.sweep, powerUnit.value);
+  }
+
+  /** The run has taken in an event. */
+  took(type, changed) {
+    if (type === "map") {
+      const { variant, point } = this.#run.liveMap;
+      if (this.selection.following) this.selection.move({ variant, point });
+      if (this.#mapShown?.variant === variant && this.#mapShown?.point === point) {
+        for (const plot of this.maps) plot.grow();
+      } else this.#drawMaps();
+    } else if (type === "point") {
+      if (this.selection.following && !this.#run.liveMap) {
+        const { variant, point } = changed.at(-1);
+        this.selection.move({ variant, point });
+      }
+      this.#drawDip();
+      this.#details.stale();
+      if (changed.some(({ has_map: has }) => has)) this.#drawMaps();
+      this.#tablesSoon();
+    } else if (type === "state") this.selection.refresh();
+  }
+
+  /** /view was read again. */
+  renewed() {
+    this.selection.refresh();
+    this.#drawAll();
+  }
+
+  #arrived(kind, variant, point) {
+    if (kind === "map") {
+      if (this.#mapShown?.variant === variant && this.#mapShown?.point === point) {
+        for (const plot of this.maps) plot.grow();
+      }
+      return;
+    }
+    this.#drawPoint();
+    if (!this.selection.atEnd) this.#drawDip();
+  }
+
+  #selectionChanged() {
+    this.#drawDip();
+    this.#drawMaps();
+    this.#drawPoint();
+    this.#wantDetails();
+  }
+
+  #comparisonChanged() {
+    this.selection.hidden = this.legend.hidden;
+    this.selection.remember();
+    this.#drawDip();
+    this.#drawPoint();
+    this.#wantDetails();
+  }
+
+  #drawAll() {
+    this.selection.relabel(this.sweep);
+    this.#drawDip();
+    this.#drawMaps();
+    this.#drawPoint();
+    this.#wantDetails();
+    this.#tables();
+  }
+
+  #shownVariants() {
+    return [...this.#run.variants.keys()].filter((variant) => this.legend.shows(variant));
+  }
+
+  #wantDetails() {
+    const { variant, point, atEnd } = this.selection;
+    const variants = [...new Set([variant, ...this.#shownVariants()])];
+    const wanted = variants.map((one) => [one, point]);
+    if (!atEnd) {
+      for (const one of variants) {
+        for (let i = 0; i < this.sweep.values.length; i += 1) if (i !== point) wanted.push([one, i]);
+      }
+    }
+    this.#details.want(wanted);
+  }
+
+  /** C12(0) at the distance selected, in the shape of a summary; the end of the line has its own. */
+  #summaryAt(variant, point) {
+    const summary = this.#run.summary(variant, point);
+    if (this.selection.atEnd || !summary || summary.outcome !== "completed") return summary;
+    const detail = this.#run.detail(variant, point);
+    if (!detail) return null;
+    const { distance } = this.selection;
+    return {
+      ...summary,
+      value: detail.distance.value[distance],
+      standard_error: detail.distance.standard_error[distance],
+      discretization_error: null,
+    };
+  }
+
+  #drawDip() {
+    const { sweep } = this;
+    const { point, atEnd, distance } = this.selection;
+    const km = this.#run.axes.distance_km[distance];
+    const curves = this.#shownVariants().map((variant) => ({
+      name: this.#run.variants[variant].name,
+      index: variant,
+      x: sweep.values,
+      points: sweep.values.map((_, i) => this.#summaryAt(variant, i)),
+    }));
+    const where = atEnd ? "" : ` at ${brief(km)} km`;
+    this.#note("dip", atEnd ? "thick bars: standard error; thin wide bars: discretization error" : `at ${brief(km)} km`);
+    this.plots.dip.draw(() => dipFigure({ curves, sweep, mark: sweep.values[point], where }));
+  }
+
+  #drawMaps() {
+    const note = find(this.root, "map-note");
+    const { variant, point } = this.selection;
+    const place = this.#run.mapNear(variant, point);
+    this.root.querySelector(".panel-maps").classList.toggle("no-map", !place);
+    if (!place) {
+      note.textContent = this.#run.active ? "draws itself once its realization is under way" : "none is kept for this run";
+      return;
+    }
+    const name = `one realization: ${this.#run.variants[place.variant].name} at ${this.sweep.text(place.point)}`;
+    const same = place.variant === variant && place.point === point;
+    note.textContent = same ? name : `${name}, the nearest that is kept`;
+    const map = this.#run.map(place.variant, place.point);
+    this.#mapShown = place;
+    const km = this.selection.atEnd ? null : this.#run.axes.distance_km[this.selection.distance];
+    for (const plot of this.maps) plot.show(map, this.#run.axes, km);
+    const live = this.#run.active && this.#run.liveMap;
+    const streaming = live && live.variant === place.variant && live.point === place.point;
+    if (!map.complete && !(streaming && map.filled[0])) this.#details.wantMap(place.variant, place.point);
+  }
+
+  #drawPoint() {
+    const { axes } = this.#run;
+    const { variant, point, distance } = this.selection;
+    const own = this.#run.detail(variant, point);
+    const shown = this.#shownVariants().flatMap((index) => {
+      const detail = this.#run.detail(index, point);
+      return detail ? [{ index, name: this.#run.variants[index].name, detail }] : [];
+    });
+    const name = this.#run.variants[variant].name;
+    const at = this.sweep.text(point);
+    for (const key of ["auto", "spectra"]) this.#note(key, `${name} at ${at}`);
+    for (const key of ["cross", "distance", "contrast", "durations"]) this.#note(key, `at ${at}`);
+    const blank = figures.blankFigure();
+    const { auto, spectra, cross, contrast, durations } = this.plots;
+    auto.draw(() => (own ? figures.autoFigure(axes, own) : blank));
+    spectra.draw(() => (own ? figures.spectraFigure(axes, own) : blank));
+    cross.draw(() => (shown.length ? figures.crossFigure(axes, shown) : blank));
+    contrast.draw(() => (shown.length ? figures.contrastFigure(axes, shown) : blank));
+    durations.draw(() => (shown.length ? figures.durationsFigure(axes, shown) : blank));
+    const km = axes.distance_km[distance];
+    this.plots.distance.draw(() => (shown.length ? figures.distanceFigure(axes, shown, km) : blank));
+    find(this.root, "readout-note").textContent = `at ${at}`;
+    fillReadout(find(this.root, "readout"), this.#shownVariants().map((index) => ({
+      name: this.#run.variants[index].name, detail: this.#run.detail(index, point),
+    })));
+  }
+
+  #note(panel, text) {
+    find(this.root.querySelector(`[data-panel="${panel}"]`), "note").textContent = text;
+  }
+
+  #tablesSoon() {
+    this.#tablesTimer ??= setTimeout(() => this.#tables(), TABLES_MS);
+  }
+
+  #tables() {
+    clearTimeout(this.#tablesTimer);
+    this.#tablesTimer = null;
+    if (!this.#run) return;
+    fillValues(find(this.root, "values"), this.#run, this.sweep);
+    fillRemarks(find(this.root, "remarks"), this.#run, this.sweep);
+  }
+
+  #zoomTogether(source, change) {
+    const axes = Object.fromEntries(
+      Object.entries(change).filter(([key]) => /^[xy]axis\.(range|autorange)/.test(key)),
+    );
+    if (this.zooming) return;
+    this.zooming = true;
+    const others = this.maps.filter((map) => map !== source);
+    Promise.all(others.map((map) => map.surface.relayout(axes))).finally(() => { this.zooming = false; });
+  }
+
+  #save(key) {
+    const title = this.#run.row.title.replace(/[^\p{L}\p{N} _.-]/gu, "").trim() || this.#run.id;
+    this.plots[key].save(`${title} ${key}`);
+  }
+
+  #resetAxes(key) {
+    const surfaces = key === "maps" ? this.maps.map((map) => map.surface) : [this.plots[key]];
+    for (const surface of surfaces) surface.resetAxes();
+  }
+}

@@ -1,0 +1,151 @@
+// An evolution map over time × distance, drawn on a canvas that serves the plot as its background
+// image: axes, zoom and hover stay the plotting library's, at a fraction of its redraw cost.
+
+import { CONTRAST_MAP, INTENSITY_MAPS, scaleOf } from "../model/colour.js";
+import { nearest } from "../model/evolution.js";
+import { brief } from "../model/quantities.js";
+import { axis, Surface } from "./surface.js";
+import { token } from "./theme.js";
+
+const KINDS = [
+  { title: "Contrast", colours: CONTRAST_MAP, intervalMs: 67 },
+  { title: "I1 (mW)", colours: INTENSITY_MAPS[0], intervalMs: 200 },
+  { title: "I2 (mW)", colours: INTENSITY_MAPS[1], intervalMs: 200 },
+];
+
+/** Colours as 32-bit words in the byte order of a canvas. */
+function words(colours) {
+  const table = new Uint8Array(4 * 256);
+  colours.forEach(([red, green, blue], i) => table.set([red, green, blue, 255], 4 * i));
+  return new Uint32Array(table.buffer);
+}
+
+export class EvolutionPlot {
+  #canvas = document.createElement("canvas");
+  #painted = new Uint8Array(0);
+  #map = null;
+  #axes = null;
+  #markKm = null;
+  #timer = null;
+
+  /** plane: 0 contrast, 1 and 2 the intensities; readout: element that tells what is under the pointer. */
+  constructor(element, plane, readout) {
+    this.plane = plane;
+    this.kind = KINDS[plane];
+    this.words = words(this.kind.colours);
+    this.surface = new Surface(element);
+    this.readout = readout;
+    this.zoomed = () => {};
+    this.surface.afterFirst.push(() => this.#listen(element));
+  }
+
+  /** Show a map (an Evolution); markKm is the distance selected. */
+  show(map, axes, markKm) {
+    const fresh = map !== this.#map || axes !== this.#axes || markKm !== this.#markKm;
+    if (map !== this.#map) {
+      this.#canvas.width = map.columns;
+      this.#canvas.height = map.rows;
+      this.#painted = new Uint8Array(map.rows);
+    }
+    this.#map = map;
+    this.#axes = axes;
+    this.#markKm = markKm;
+    if (fresh || !this.surface.ready || map.scale !== this.scaleShown) {
+      this.#paint();
+      this.surface.draw(() => this.#figure());
+    }
+  }
+
+  /** Rows have been added to the map shown. */
+  grow() {
+    this.#timer ??= setTimeout(() => {
+      this.#timer = null;
+      if (this.#map && this.#paint()) this.surface.image(0, this.#canvas.toDataURL());
+      if (this.#map && this.#map.scale !== this.scaleShown) this.surface.draw(() => this.#figure());
+    }, this.kind.intervalMs);
+  }
+
+  /** Paint rows that are new; whether there were any. The launch is at the bottom. */
+  #paint() {
+    const { rows, columns, filled, data, scale } = this.#map;
+    const context = this.#canvas.getContext("2d");
+    let changed = false;
+    if (scale !== this.scalePainted) this.#painted.fill(0);
+    this.scalePainted = scale;
+    for (let row = 0; row < rows; row += 1) {
+      if (!filled[row] || this.#painted[row]) continue;
+      const image = context.createImageData(columns, 1);
+      const pixels = new Uint32Array(image.data.buffer);
+      const start = (this.plane * rows + row) * columns;
+      for (let i = 0; i < columns; i += 1) pixels[i] = this.words[data[start + i]];
+      context.putImageData(image, 0, rows - 1 - row);
+      this.#painted[row] = 1;
+      changed = true;
+    }
+    return changed;
+  }
+
+  #figure() {
+    const { distance_km: distances, time_ps: times } = this.#axes.map;
+    const ends = (values) => [values[0], values.at(-1)];
+    const [t0, t1] = ends(times);
+    const [z0, z1] = ends(distances);
+    const top = this.plane === 0 ? 1 : 255e3 * this.#map.scale || 1;
+    this.scaleShown = this.#map.scale;
+    const corners = {
+      type: "heatmap", x: [t0, t1], y: [z0, z1], z: [[0, 0], [0, 0]],
+      opacity: 0, showscale: false, hoverinfo: "none",
+    };
+    const bar = {
+      type: "scatter", mode: "markers", x: [null], y: [null], hoverinfo: "skip", showlegend: false,
+      marker: {
+        color: [0], cmin: this.plane === 0 ? -1 : 0, cmax: top, showscale: true,
+        colorscale: scaleOf(this.kind.colours),
+        colorbar: {
+          thickness: 10, outlinewidth: 0, ticks: "outside", ticklen: 3, xpad: 6, nticks: 5,
+          title: { text: this.kind.title, side: "right" },
+        },
+      },
+    };
+    return {
+      traces: [corners, bar],
+      layout: {
+        margin: { l: 50, r: 8, t: 6, b: 38 },
+        xaxis: axis("Time (ps)", { range: [t0, t1], showgrid: false, zeroline: false }),
+        yaxis: axis("Distance (km)", { range: [z0, z1], showgrid: false, zeroline: false }),
+        plot_bgcolor: token("--unwritten"),
+        images: [{
+          source: this.#canvas.toDataURL(), xref: "x", yref: "y", x: t0, y: z1,
+          sizex: t1 - t0, sizey: z1 - z0, sizing: "stretch", layer: "below",
+        }],
+        shapes: this.#markKm === null ? [] : [{
+          type: "line", xref: "paper", x0: 0, x1: 1, y0: this.#markKm, y1: this.#markKm,
+          line: { color: token("--cursor"), width: 1, dash: "dot" },
+        }],
+      },
+    };
+  }
+
+  #listen(element) {
+    element.on("plotly_hover", (event) => this.#tell(event.xvals?.[0], event.yvals?.[0]));
+    element.on("plotly_unhover", () => { this.readout.textContent = ""; });
+    element.on("plotly_relayout", (change) => {
+      const keys = Object.keys(change);
+      if (keys.some((key) => /^[xy]axis\.(range|autorange)/.test(key))) this.zoomed(change);
+    });
+  }
+
+  #tell(time, distance) {
+    if (!Number.isFinite(time) || !Number.isFinite(distance)) return;
+    const { distance_km: distances, time_ps: times } = this.#axes.map;
+    const row = nearest(distances, distance);
+    const column = nearest(times, time);
+    const values = [0, 1, 2].map((plane) => this.#map.at(plane, row, column));
+    const place = `${brief(times[column])} ps, ${brief(distances[row], 3)} km`;
+    this.readout.textContent =
+      values[0] === null
+        ? place
+        : `${place}: contrast ${brief(values[0], 2)}, ` +
+          `I1 ${brief(1e3 * values[1], 3)} mW, I2 ${brief(1e3 * values[2], 3)} mW`;
+  }
+}

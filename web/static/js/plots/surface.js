@@ -1,0 +1,144 @@
+// One plot on the page: loads the library when first needed, redraws at a bounded rate and only
+// while in sight, follows the theme and its box, and exports itself.
+
+import { theme, token } from "./theme.js";
+
+let library = null;
+
+/** The plotting library, loaded once; the page's own parts do not wait for it. */
+export function plotly() {
+  library ??= new Promise((resolve, reject) => {
+    const script = document.createElement("script");
+    script.src = document.documentElement.dataset.plotly;
+    script.onload = () => resolve(window.Plotly);
+    script.onerror = () => reject(new Error("The plotting library did not load: reload the page."));
+    document.head.append(script);
+  });
+  return library;
+}
+
+const CONFIG = { displayModeBar: false, responsive: false, doubleClick: "reset" };
+
+export function axis(title, more = {}) {
+  return {
+    title: { text: title, standoff: 6 },
+    gridcolor: token("--grid"),
+    linecolor: token("--axis"),
+    tickcolor: token("--axis"),
+    zerolinecolor: token("--zero"),
+    ticks: "outside",
+    ticklen: 4,
+    showline: true,
+    automargin: true,
+    minexponent: 4,
+    ...more,
+  };
+}
+
+function baseLayout() {
+  return {
+    paper_bgcolor: "rgba(0,0,0,0)",
+    plot_bgcolor: token("--plot"),
+    font: { family: token("--font"), size: 12, color: token("--ink-2") },
+    margin: { l: 52, r: 10, t: 8, b: 40 },
+    showlegend: false,
+    hovermode: "closest",
+    hoverlabel: { bgcolor: token("--panel"), bordercolor: token("--axis"), font: { color: token("--ink") } },
+  };
+}
+
+export class Surface {
+  #pending = null;
+  #drawn = null;
+  #timer = null;
+  #last = 0;
+  #inSight = false;
+  #busy = false;
+  #zoom = 0;
+
+  /** element: the box; intervalMs: the shortest time between two redraws. */
+  constructor(element, { intervalMs = 250 } = {}) {
+    this.element = element;
+    this.intervalMs = intervalMs;
+    this.afterFirst = [];
+    new IntersectionObserver((entries) => {
+      this.#inSight = entries.at(-1).isIntersecting;
+      this.#schedule();
+    }, { rootMargin: "200px" }).observe(element);
+    new ResizeObserver(() => this.#redrawKept()).observe(element);
+    theme.addEventListener("change", () => this.#redrawKept());
+  }
+
+  /** make() returns {traces, layout}; it is called when the plot is really drawn. */
+  draw(make) {
+    this.#pending = make;
+    this.#schedule();
+  }
+
+  get ready() {
+    return Boolean(this.#drawn);
+  }
+
+  #redrawKept() {
+    this.#pending ??= this.#drawn;
+    this.#schedule();
+  }
+
+  #schedule() {
+    if (!this.#pending || !this.#inSight || this.#timer || this.#busy) return;
+    const wait = Math.max(0, this.#last + this.intervalMs - performance.now());
+    this.#timer = setTimeout(() => {
+      this.#timer = null;
+      requestAnimationFrame(() => this.#flush());
+    }, wait);
+  }
+
+  async #flush() {
+    if (!this.#pending || this.#busy) return;
+    const { width, height } = this.element.getBoundingClientRect();
+    if (!width || !height) return;
+    this.#busy = true;
+    const first = !this.#drawn;
+    this.#drawn = this.#pending;
+    this.#pending = null;
+    try {
+      const library = await plotly();
+      const { traces, layout } = this.#drawn();
+      await library.react(this.element, traces, { ...baseLayout(), uirevision: this.#zoom, width, height, ...layout }, CONFIG);
+      if (first) for (const act of this.afterFirst) act(library);
+    } finally {
+      this.#last = performance.now();
+      this.#busy = false;
+      this.#schedule();
+    }
+  }
+
+  /** Replace the source of layout image i, without a full redraw. */
+  async image(i, source) {
+    if (this.#drawn && !this.#busy) {
+      await (await plotly()).relayout(this.element, { [`images[${i}].source`]: source });
+    }
+  }
+
+  async relayout(change) {
+    if (this.#drawn) await (await plotly()).relayout(this.element, change);
+  }
+
+  /** Save the plot as it stands, with a legend, as an SVG file. */
+  async save(filename) {
+    if (!this.#drawn) return;
+    const library = await plotly();
+    const { traces, layout } = this.#drawn();
+    const copy = { ...baseLayout(), ...layout, showlegend: true, width: 900, height: 560 };
+    copy.paper_bgcolor = token("--panel");
+    copy.margin = { ...copy.margin, r: 20, t: 24 };
+    copy.legend = { orientation: "h", y: 1.02, yanchor: "bottom", x: 0, font: { size: 12 } };
+    await library.downloadImage({ data: traces, layout: copy }, { format: "svg", width: 900, height: 560, filename });
+  }
+
+  /** Undo every zoom. */
+  resetAxes() {
+    this.#zoom += 1;
+    this.#redrawKept();
+  }
+}
