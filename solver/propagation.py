@@ -1,0 +1,272 @@
+"""Fields down a line: steps, snapshots, outcome.
+
+The tolerance is on the field at the end of the line, as the relative L2 norm of its error.
+Two runs with different numbers of steps differ by a known multiple of that error, since the
+order of the scheme is known, so the number of steps is found by Richardson's argument; a field
+is accepted only when its error has been measured against another run of the whole line.
+"""
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from solver.experiment import Precision, Span
+from solver.grid import Field, Grid, Real
+from solver.kernels import band_energy
+from solver.schemes import FOURTH_ORDER, SECOND_ORDER, Scheme
+from solver.track import COMPLETED, Light, Outcome, Piece, Track
+from solver.transforms import COMPLEX, Transforms, batch_size, transforms
+
+PATIENCE = 2
+"""Times the steps are halved before a full band is put down to the light itself."""
+STEP_LIMIT = 400_000
+"""Steps down one line past which a tolerance is given up."""
+
+
+def scheme_for(tolerance: float) -> Scheme:
+    """The scheme that meets a field tolerance with the fewest transforms."""
+    return SECOND_ORDER if tolerance > 3e-4 else FOURTH_ORDER
+
+
+def light_of(field: Field) -> Light:
+    """The :class:`Light` of fields of shape (realizations, 2, samples), √W."""
+    power = np.sum(np.abs(field) ** 2, axis=1, dtype=np.float64)
+    mean = max(float(power.mean()), np.finfo(float).tiny)
+    density = np.mean(np.abs(np.fft.fft(field)) ** 2, axis=(0, 1))
+    return Light(
+        float((power**2).mean()) / mean, density / max(density.sum(), np.finfo(float).tiny)
+    )
+
+
+def relative_error(field: Field, reference: Field) -> float:
+    """Largest relative L2 distance of any realization from its reference."""
+    distance = np.sqrt(np.sum(np.abs(field - reference) ** 2, axis=(1, 2), dtype=np.float64))
+    size = np.sqrt(np.sum(np.abs(reference) ** 2, axis=(1, 2), dtype=np.float64))
+    return float(np.max(distance / np.maximum(size, np.finfo(float).tiny)))
+
+
+def richardson(difference: float, ratio: float, order: int) -> float:
+    """Error of the finer of two runs whose numbers of steps have the given ratio > 1."""
+    return difference / (ratio**order - 1.0)
+
+
+@dataclass(frozen=True)
+class Propagation:
+    """What :func:`propagate` returns.
+
+    field: (realizations, 2, samples), √W, complex64 or complex128 as the precision asked.
+    z_km: distances of the snapshots, or of the end alone; snapshots: (len(z_km), realizations,
+    2, samples) or None. steps: steps of the accepted run; transforms: batch transforms spent,
+    trial runs included; error: its measured relative error, nan where the outcome is not
+    ``completed``.
+    """
+
+    field: Field
+    z_km: Real
+    snapshots: Field | None
+    steps: int
+    transforms: int
+    error: float
+    outcome: Outcome
+
+
+def propagate(
+    field: Field,
+    *,
+    time_step_ps: float,
+    line: Sequence[Span],
+    tolerance: float = 1e-6,
+    precision: Precision = "double",
+    snapshots_km: Sequence[float] | None = None,
+    wavelength_nm: float = 1552.0,
+    fibre_seed: int = 0,
+) -> Propagation:
+    """Propagate fields down a line of fibre to a stated accuracy.
+
+    field: complex, shape (realizations, 2, samples), √W, samples even; periodic in time.
+    tolerance: relative L2 error of the field at the end, for every realization.
+    snapshots_km: ascending distances in [0, length]; the field at each is returned.
+    wavelength_nm: converts a span's D into β2; unused where β2 is given.
+    fibre_seed: draws the random sections of spans with polarization-mode dispersion.
+
+    Raises ValueError for arguments out of range. A field that cannot be resolved on its grid,
+    overflows, or does not meet the tolerance is returned as far as it went, with a named
+    outcome that says what to do: look at ``outcome.kind`` before using ``field``.
+    """
+    field = _checked_field(field)
+    if not (math.isfinite(time_step_ps) and time_step_ps > 0.0):
+        raise ValueError("time_step_ps must be positive")
+    if not 1e-13 <= tolerance <= 0.5:
+        raise ValueError("tolerance must lie between 1e-13 and 0.5")
+    if precision not in COMPLEX:
+        raise ValueError("precision must be 'single' or 'double'")
+    if not line:
+        raise ValueError("line must hold at least one span")
+    length = sum(span.length_km for span in line)
+    wanted = [] if snapshots_km is None else [float(z) for z in snapshots_km]
+    if any(not 0.0 <= z <= length * (1 + 1e-12) for z in wanted) or wanted != sorted(set(wanted)):
+        raise ValueError(f"snapshots_km must ascend within 0 to {length:g} km")
+
+    grid = Grid(field.shape[2], time_step_ps)
+    track = Track(
+        line, grid, wavelength_nm=wavelength_nm, recorded_km=wanted, fibre_seed=fibre_seed
+    )
+    result = np.array(field, dtype=COMPLEX[precision])
+    kept = (
+        None
+        if snapshots_km is None
+        else np.zeros((len(wanted), *field.shape), dtype=COMPLEX[precision])
+    )
+    batch = batch_size(grid.samples)
+    steps = spent = 0
+    error = 0.0
+    outcome = COMPLETED
+    for start in range(0, field.shape[0], batch):
+        rows = slice(start, min(start + batch, field.shape[0]))
+        part = _propagate_batch(track, field[rows], tolerance, precision, wanted)
+        result[rows] = part.field
+        if kept is not None and part.snapshots is not None:
+            kept[:, rows] = part.snapshots
+        steps, spent = max(steps, part.steps), spent + part.transforms
+        error = float(np.maximum(error, part.error))
+        if outcome.kind == "completed":
+            outcome = part.outcome
+    z_km = np.array(wanted if snapshots_km is not None else [length])
+    return Propagation(result, z_km, kept, steps, spent, error, outcome)
+
+
+def _checked_field(field: Field) -> Field:
+    field = np.asarray(field)
+    if field.ndim != 3 or field.shape[1] != 2 or field.shape[0] < 1:
+        raise ValueError("field must have the shape (realizations, 2, samples)")
+    if field.shape[2] < 8 or field.shape[2] % 2:
+        raise ValueError("field must have an even number of samples, 8 or more")
+    field = field.astype(np.complex128)
+    if not np.isfinite(field).all():
+        raise ValueError("field must be finite: it holds NaN or infinity")
+    return field
+
+
+def edge_limit(tolerance: float, precision: Precision) -> float:
+    """Share of the energy allowed at the edges: an amplitude of a third of the tolerance."""
+    floor = 1e-10 if precision == "single" else 1e-24
+    return max(tolerance**2 / 9.0, floor)
+
+
+def _propagate_batch(
+    track: Track, field: Field, tolerance: float, precision: Precision, wanted: Sequence[float]
+) -> Propagation:
+    scheme = scheme_for(tolerance)
+    light = light_of(field)
+    limit = edge_limit(tolerance, precision)
+    spectrum = np.fft.fft(field)
+    work = transforms(field.shape[0], track.grid.samples, precision)
+    spent = 0
+
+    def finish(run: "_Run", error: float, outcome: Outcome) -> Propagation:
+        return Propagation(
+            run.field, np.array(wanted), run.snapshots, run.steps, spent, error, outcome
+        )
+
+    def run(steps: float, keep: bool) -> "_Run":
+        nonlocal spent
+        pieces = track.pieces(scheme, light, steps)
+        made = _run(track, work, field, pieces, scheme, precision, limit, wanted if keep else ())
+        spent += made.steps * scheme.transforms_per_step
+        return made
+
+    total = band_energy(spectrum, 0, track.grid.samples)
+    share = track.edge_share(spectrum, total, track.grid.samples // 2)
+    if share > limit:
+        untouched = _Run(field.astype(COMPLEX[precision]), None, 0, COMPLETED)
+        return finish(
+            untouched,
+            math.nan,
+            Outcome(
+                "under_resolved",
+                f"the input fills its band (share of the energy at its edges {share:.1e}, "
+                f"allowed {limit:.1e}): use a time step of {track.grid.time_step_ps / 2:g} ps "
+                "or less, or a looser tolerance",
+                0.0,
+            ),
+        )
+
+    keep = bool(wanted)
+    steps = track.expected_steps(scheme, light, tolerance)
+    coarse = run(steps / 2, False)
+    for _ in range(PATIENCE):
+        if coarse.outcome.kind != "aliased":
+            break
+        # Steps that are too long scatter energy to the edges of the band by themselves.
+        steps *= 2.0
+        coarse = run(steps / 2, False)
+    if coarse.outcome.kind != "completed":
+        return finish(coarse, math.nan, coarse.outcome)
+    previous_error = math.inf
+    while True:
+        fine = run(max(steps, 1.25 * coarse.steps), keep)
+        if fine.outcome.kind != "completed":
+            return finish(fine, math.nan, fine.outcome)
+        if fine.steps == coarse.steps or not track.weights(scheme, light).any():
+            return finish(fine, 0.0, COMPLETED)
+        error = richardson(
+            relative_error(coarse.field, fine.field), fine.steps / coarse.steps, scheme.order
+        )
+        if error <= tolerance:
+            return finish(fine, error, COMPLETED)
+        growth = (1.3 * error / tolerance) ** (1 / scheme.order)
+        stalled = error > 0.5 * previous_error
+        if stalled or fine.steps * growth > STEP_LIMIT:
+            reason = (
+                "rounding errors dominate: loosen the tolerance or use double precision"
+                if stalled
+                else "it would take too many steps: loosen the tolerance or shorten the line"
+            )
+            return finish(
+                fine,
+                error,
+                Outcome(
+                    "tolerance_not_met",
+                    f"reached a relative error of {error:.1e} instead of {tolerance:.1e}; {reason}",
+                    track.length_km,
+                ),
+            )
+        previous_error, coarse = error, fine
+        steps = fine.steps * min(max(growth, 1.25), 8.0)
+
+
+@dataclass(frozen=True)
+class _Run:
+    field: Field
+    snapshots: Field | None
+    steps: int
+    outcome: Outcome
+
+
+def _run(
+    track: Track,
+    work: Transforms,
+    field: Field,
+    pieces: Sequence[Piece],
+    scheme: Scheme,
+    precision: Precision,
+    limit: float,
+    wanted: Sequence[float],
+) -> _Run:
+    work.buffer[:] = field
+    snapshots = None
+    if wanted:
+        snapshots = np.zeros((len(wanted), *field.shape), dtype=work.buffer.dtype)
+        if wanted[0] == 0.0:
+            snapshots[0] = field
+    offset = 0 if wanted and wanted[0] == 0.0 else 1
+
+    def observe(index: int, here: Field) -> None:
+        if snapshots is not None:
+            snapshots[index - offset] = here
+
+    outcome = track.march(work, pieces, scheme, precision, edge_limit=limit, observe=observe)
+    steps = sum(piece.steps for piece in pieces)
+    return _Run(work.buffer.copy(), snapshots, steps, outcome)

@@ -1,0 +1,49 @@
+"""Power spectra of thermal-like light, and its random draws."""
+
+import numpy as np
+
+from solver.experiment import Source
+from solver.grid import Complex, Grid, Real
+
+
+def power_spectrum(source: Source, grid: Grid) -> Real:
+    """Fraction of the source's power in each frequency bin, FFT order, summing to 1."""
+    x = 2e3 * grid.frequency_thz / source.width_ghz  # ±1 at half maximum
+    match source.shape:
+        case "gaussian":
+            density = np.exp(-np.log(2.0) * x**2)
+        case "super_gaussian":
+            density = np.exp(-np.log(2.0) * np.minimum(np.abs(x), 1e3) ** (2 * source.order))
+        case "rectangular":
+            density = (np.abs(x) <= 1.0).astype(np.float64)
+        case "sech2":
+            density = 1.0 / np.cosh(np.minimum(np.arccosh(np.sqrt(2.0)) * np.abs(x), 300.0)) ** 2
+    return np.asarray(density / density.sum())
+
+
+def draw(seed: int, realizations: range, grid: Grid) -> Complex:
+    """White circular complex Gaussian noise of unit variance per frequency bin.
+
+    Shape (realizations, 2 draws, samples), FFT order. Realization ``i`` of a seed is always
+    child ``i`` of its SeedSequence, and bins are drawn outwards from the carrier, so that the
+    light is the same whatever the batch and however fine the time step of the same window.
+    """
+    samples = grid.samples
+    outwards = np.argsort(np.abs(np.fft.fftfreq(samples)), kind="stable")
+    noise = np.empty((len(realizations), 2, samples), dtype=np.complex128)
+    for row, index in zip(noise, realizations, strict=True):
+        stream = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(index,)))
+        values = stream.standard_normal((samples, 4)) * np.sqrt(0.5)
+        row[0, outwards] = values[:, 0] + 1j * values[:, 1]
+        row[1, outwards] = values[:, 2] + 1j * values[:, 3]
+    return noise
+
+
+def synthesize(noise: Complex, response: Complex) -> Complex:
+    """Fields in √W from white noise and the response of the whole input.
+
+    noise has shape (realizations, 2 draws, samples), response (2 components, 2 draws, samples)
+    in √W; the result has shape (realizations, 2 components, samples).
+    """
+    spectrum = np.einsum("jdf,rdf->rjf", response, noise)
+    return np.asarray(np.fft.ifft(spectrum, norm="forward"))

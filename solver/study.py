@@ -1,0 +1,347 @@
+"""From a study to tasks, and from their outcomes, in any order, to curves.
+
+:class:`StudyState` is bookkeeping only: it never computes a field. Each point of each curve is
+a chain of rounds; a round is taken in as a whole, in the order of its realizations, before
+anything is decided from it, so the result does not depend on how many workers there are or
+which of them is fast.
+"""
+
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from solver.experiment import Study
+from solver.result import LinearRegime, Picture, PointResult, StudyResult
+from solver.statistics import Blocks, Estimators, Layout, Means, last_central
+from solver.task import Findings, MapPart, MapTask, RoundOutcome, RoundTask, Task
+
+ROUND = 16
+"""Realizations in one task."""
+MOST_REFINED = 4
+"""How far a point's time step may be divided when its spectrum fills the band."""
+
+
+def execute(task: Task) -> RoundOutcome | MapPart:
+    """Carry out a task. Runs on a worker; loads the compiled solver there."""
+    from solver import ensemble  # here, so that the server can import this module without it
+
+    if isinstance(task, MapTask):
+        return ensemble.run_map(task)
+    assert isinstance(task, RoundTask)
+    return ensemble.run_round(task)
+
+
+def prepare(study: Study) -> None:
+    """Load and compile what a study's tasks need, on the worker this runs on."""
+    first = study.experiment_at(0, 0)
+    execute(MapTask("warm-map", 0, 0, 0, first, part=0))
+    execute(RoundTask("warm-round", 0, 0, 0, first, first=0, count=4, refinement=1, steps=None))
+
+
+def realizations_per_task(samples: int) -> int:
+    """Realizations in one task, fewer on large grids so that no task lasts long."""
+    return max(1, min(ROUND, ROUND * 8192 // samples))
+
+
+@dataclass(frozen=True)
+class Progress:
+    """How far a study has got; ``fraction`` is an estimate in [0, 1]."""
+
+    fraction: float
+    realizations: int
+    points_done: int
+    points_total: int
+
+
+@dataclass(frozen=True)
+class MapRows:
+    """Rows that a part added to the live map."""
+
+    variant: int
+    point: int
+    first_row: int
+    picture: Picture
+
+
+class Chain:
+    """The rounds of one point: what is under way, what has been taken in, whether it is enough."""
+
+    def __init__(self, study: Study, variant: int, point: int) -> None:
+        self.variant, self.point = variant, point
+        self.experiment = study.experiment_at(variant, point)
+        self.ensemble = self.experiment.ensemble
+        self.layout = Layout.of(self.ensemble)
+        self.rank = 0
+        self._start(refinement=1)
+
+    def _start(self, refinement: int) -> None:
+        self.refinement = refinement
+        self.blocks = Blocks(self.layout.block_features)
+        self.means = Means(self.layout.mean_features)
+        self.findings: Findings | None = None
+        self.transforms = 0
+        self.outcome, self.advice = "completed", ""
+        self.final = self.target_met = False
+        self._under_way: set[int] = set()
+        self._arrived: dict[int, RoundOutcome] = {}
+        self._result: PointResult | None = None
+
+    @property
+    def realizations(self) -> int:
+        """Realizations taken in."""
+        return self.blocks.realizations
+
+    def next_round(self) -> list[RoundTask]:
+        """Tasks of the next round; none when the point is final."""
+        if self.final:
+            return []
+        size = realizations_per_task(self.ensemble.samples * self.refinement)
+        first = self.realizations
+        # The first task finds the steps for all the others, so it goes alone.
+        last = self._wanted() if self.findings else first + size
+        last = min(last, self.ensemble.max_realizations)
+        tasks = [
+            RoundTask(
+                key=f"round-{self.variant}-{self.point}-{self.refinement}-{start}",
+                variant=self.variant,
+                point=self.point,
+                priority=-self.rank,
+                experiment=self.experiment,
+                first=start,
+                count=min(size, last - start),
+                refinement=self.refinement,
+                steps=self.findings.steps if self.findings else None,
+            )
+            for start in range(first, last, size)
+        ]
+        self._under_way = {task.first for task in tasks}
+        return tasks
+
+    def _wanted(self) -> int:
+        """Realizations to have after the next round, from the standard error of this one."""
+        n, fewest = self.realizations, self.ensemble.min_realizations
+        if n < fewest:
+            return fewest
+        ratio = self.standard_error() / self.ensemble.standard_error_target
+        needed = ROUND * math.ceil(min(n * ratio**2, 1e9) / ROUND)
+        return min(max(needed, n + ROUND), 4 * n)
+
+    def standard_error(self) -> float:
+        """Standard error of C12(0) at the end of the line, infinite before there is one."""
+        if self.realizations < 2:
+            return math.inf
+        error = float(last_central(self.layout, self.blocks).standard_error[0])
+        return error if math.isfinite(error) else math.inf
+
+    def absorb(self, task: RoundTask, outcome: RoundOutcome) -> list[RoundTask]:
+        """Take an outcome in; when its round is whole, the tasks of the next one."""
+        if task.refinement != self.refinement or task.first not in self._under_way:
+            return []  # of a round that has been given up
+        self._arrived[task.first] = outcome
+        if self._under_way - self._arrived.keys():
+            return []
+        whole = [self._arrived[first] for first in sorted(self._arrived)]
+        self._arrived, self._result = {}, None
+        for part in whole:
+            if part.outcome == "aliased" and self.refinement < MOST_REFINED:
+                self._start(2 * self.refinement)
+                return self.next_round()
+            if part.outcome != "completed":
+                self._start(self.refinement)
+                self.outcome, self.advice, self.final = part.outcome, part.advice, True
+                return []
+        for part in whole:
+            self.blocks.add(part.blocks)
+            self.means.add(len(part.blocks), part.sums)
+            self.transforms += part.transforms
+            self.findings = part.findings or self.findings
+        self._decide()
+        return self.next_round()
+
+    def _decide(self) -> None:
+        n = self.realizations
+        enough = n >= self.ensemble.min_realizations
+        self.target_met = enough and self.standard_error() <= self.ensemble.standard_error_target
+        self.final = self.target_met or n >= self.ensemble.max_realizations
+
+    def fraction(self) -> float:
+        """Share of the realizations it will take, as far as can be told."""
+        if self.final:
+            return 1.0
+        n = self.realizations
+        if n == 0:
+            return 0.0
+        likely = n * (self.standard_error() / self.ensemble.standard_error_target) ** 2
+        ensemble = self.ensemble
+        return n / min(max(likely, n + 1, ensemble.min_realizations), ensemble.max_realizations + 1)
+
+    def result(self) -> PointResult | None:
+        """What has been found so far; None before anything has."""
+        if self._result is None and (self.final or self.findings):
+            self._result = PointResult(
+                variant=self.variant,
+                point=self.point,
+                realizations=self.realizations,
+                target_met=self.target_met,
+                final=self.final,
+                outcome=self.outcome,
+                advice=self.advice,
+                discretization_error=self.findings.discretization_error if self.findings else 0.0,
+                steps=self.findings.steps if self.findings else 0,
+                transforms=self.transforms,
+                refinement=self.refinement,
+                estimates=(
+                    Estimators(self.layout, self.blocks, self.means) if self.findings else {}
+                ),
+                linear=self.findings.linear if self.findings else None,
+                picture=self.findings.picture if self.findings else None,
+            )
+        return self._result
+
+    def checkpoint(self) -> dict[str, np.ndarray] | None:
+        """State after whole rounds, as arrays; None before the first."""
+        if self.findings is None and not self.final:
+            return None
+        arrays = {
+            "refinement": np.array(self.refinement),
+            "transforms": np.array(self.transforms),
+            "outcome": np.array(self.outcome),
+            "advice": np.array(self.advice),
+            **{f"blocks/{name}": value for name, value in self.blocks.arrays().items()},
+            **{f"means/{name}": value for name, value in self.means.arrays().items()},
+        }
+        if self.findings is not None:
+            found = self.findings
+            arrays |= {
+                "steps": np.array(found.steps),
+                "discretization_error": np.array(found.discretization_error),
+                "map": found.picture.data,
+                "intensity_scale_w": np.array(found.picture.intensity_scale_w),
+                **{f"linear/{name}": np.array(x) for name, x in vars(found.linear).items()},
+            }
+        return arrays
+
+    def restore(self, arrays: Mapping[str, np.ndarray]) -> None:
+        """Go on from a :meth:`checkpoint`."""
+
+        def under(prefix: str) -> dict[str, np.ndarray]:
+            return {k.removeprefix(prefix): v for k, v in arrays.items() if k.startswith(prefix)}
+
+        self._start(int(arrays["refinement"]))
+        self.transforms = int(arrays["transforms"])
+        self.outcome, self.advice = str(arrays["outcome"]), str(arrays["advice"])
+        self.blocks = Blocks.from_arrays(under("blocks/"))
+        self.means = Means.from_arrays(under("means/"))
+        if self.outcome != "completed":
+            self.final = True
+            return
+        linear = under("linear/")
+        self.findings = Findings(
+            int(arrays["steps"]),
+            float(arrays["discretization_error"]),
+            Picture(np.array(arrays["map"]), float(arrays["intensity_scale_w"])),
+            LinearRegime(
+                linear["auto1"],
+                linear["auto2"],
+                linear["sum"],
+                linear["cross"],
+                float(linear["moment_cross"]),
+            ),
+        )
+        self._decide()
+
+
+def _outside_in(count: int) -> list[int]:
+    """0 to count − 1 in an order that shows the whole curve early: ends, middle, quarters…"""
+    order = [0, count - 1] if count > 1 else [0]
+    gaps = [(0, count - 1)]
+    while gaps:
+        low, high = gaps.pop(0)
+        if high - low > 1:
+            middle = (low + high) // 2
+            order.append(middle)
+            gaps += [(low, middle), (middle, high)]
+    return order
+
+
+class StudyState:
+    """All chains of a study, and the map that is watched live. Not thread-safe."""
+
+    def __init__(self, study: Study) -> None:
+        self.study = study
+        self.live_map = (0, study.sweep.points - 1)
+        variants = range(len(study.variants))
+        self.chains = {
+            (variant, point): Chain(study, variant, point)
+            for variant in variants
+            for point in range(study.sweep.points)
+        }
+        for place, point in enumerate(_outside_in(study.sweep.points)):
+            for variant in variants:
+                self.chains[variant, point].rank = place * len(variants) + variant
+
+    def ready(self) -> list[Task]:
+        """The tasks to begin with; call once, after any :meth:`restore`."""
+        tasks: list[Task] = [task for chain in self.chains.values() for task in chain.next_round()]
+        variant, point = self.live_map
+        chain = self.chains[self.live_map]
+        if not chain.findings and not chain.final:
+            tasks.append(MapTask("map-0", variant, point, 1, chain.experiment, part=0))
+        return sorted(tasks, key=lambda task: -task.priority)
+
+    def absorb(self, task: Task, outcome: RoundOutcome | MapPart) -> list[Task]:
+        """Take in what a task came to; returns the tasks that have become ready."""
+        if isinstance(task, MapTask):
+            assert isinstance(outcome, MapPart)
+            if outcome.field is None:
+                return []
+            part = task.part + 1
+            return [replace(task, key=f"map-{part}", part=part, field=outcome.field)]
+        assert isinstance(task, RoundTask)
+        assert isinstance(outcome, RoundOutcome)
+        return list(self.chains[task.variant, task.point].absorb(task, outcome))
+
+    def live_map_rows(self, task: Task, outcome: RoundOutcome | MapPart) -> MapRows | None:
+        """The rows that a part of the live map added; None for any other task."""
+        if not isinstance(outcome, MapPart):
+            return None
+        return MapRows(task.variant, task.point, outcome.first_row, outcome.picture)
+
+    @property
+    def finished(self) -> bool:
+        """Whether every point is final."""
+        return all(chain.final for chain in self.chains.values())
+
+    def progress(self) -> Progress:
+        """How far the study has got."""
+        chains = self.chains.values()
+        return Progress(
+            fraction=sum(chain.fraction() for chain in chains) / len(chains),
+            realizations=sum(chain.realizations for chain in chains),
+            points_done=sum(chain.final for chain in chains),
+            points_total=len(chains),
+        )
+
+    def point(self, variant: int, point: int) -> PointResult | None:
+        """What has been found of a point so far; None before anything has."""
+        return self.chains[variant, point].result()
+
+    def checkpoint(self, variant: int, point: int) -> dict[str, np.ndarray] | None:
+        """A point's state after whole rounds, as arrays; None before the first."""
+        return self.chains[variant, point].checkpoint()
+
+    def restore(self, variant: int, point: int, arrays: Mapping[str, np.ndarray]) -> None:
+        """Go on from a :meth:`checkpoint` of the same study; call before :meth:`ready`."""
+        self.chains[variant, point].restore(arrays)
+
+    def result(self) -> StudyResult:
+        """Everything found so far."""
+        return StudyResult(
+            self.study,
+            [
+                [self.point(variant, point) for point in range(self.study.sweep.points)]
+                for variant in range(len(self.study.variants))
+            ],
+        )
