@@ -10,7 +10,7 @@ import numpy as np
 
 from solver.experiment import Experiment
 from solver.grid import Complex, Field, Grid, Real
-from solver.kernels import intensity_moments
+from solver.kernels import column_powers, intensity_moments
 from solver.propagation import (
     PATIENCE,
     STEP_LIMIT,
@@ -217,8 +217,7 @@ def _linear_regime(experiment: Experiment, layout: Layout) -> LinearRegime:
 
 def _levels(field: Field, columns: int, scale_w: float) -> np.ndarray:
     """One row of a map, uint8, shape (3, columns), from a field of shape (2, samples)."""
-    power = np.square(field.real) + np.square(field.imag)
-    first, second = power.reshape(2, columns, -1).mean(axis=2)
+    first, second = column_powers(field, columns)
     total = first + second
     contrast = (first - second) / np.where(total > 0.0, total, 1.0)
     rows = np.stack([127.5 * (contrast + 1.0), first / scale_w, second / scale_w])

@@ -115,6 +115,26 @@ def band_energy(spectrum: Field, first: int, last: int) -> Real:
 
 
 @njit(cache=True, fastmath={"contract", "reassoc"}, error_model="numpy")
+def column_powers(field: Field, columns: int) -> Real:
+    """Mean power of both components in equal parts of the window; float64, shape (2, columns).
+
+    field: complex, shape (2, samples), √W; columns divides samples.
+    """
+    samples = field.shape[1]
+    width = samples // columns
+    powers = np.empty((2, columns))
+    for j in range(2):
+        line = field[j]
+        for column in range(columns):
+            total = 0.0
+            for i in range(column * width, (column + 1) * width):
+                real, imag = np.float64(line[i].real), np.float64(line[i].imag)
+                total += real * real + imag * imag
+            powers[j, column] = total / width
+    return powers
+
+
+@njit(cache=True, fastmath={"contract", "reassoc"}, error_model="numpy")
 def intensity_moments(field: Field) -> Real:
     """Time means of I1, I2, I1², I2², I1·I2 of each realization; float64, shape (realizations, 5).
 

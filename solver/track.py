@@ -76,6 +76,7 @@ class Track:
         self.length_km = sum(section.length_km for section in self.sections)
         self._stretches = list(self._cut([z for z in recorded_km if z > 0.0]))
         self._operators: dict[tuple[Any, ...], tuple[list[Any], int]] = {}
+        self._weighed: tuple[Scheme, Light, Real] | None = None
 
     def _cut(self, recorded_km: Sequence[float]) -> Iterator[tuple[int, float, float, bool]]:
         """Yield (section, start, end, recorded) of every stretch between two borders."""
@@ -83,11 +84,11 @@ class Track:
         start = border = 0.0
         for index, section in enumerate(self.sections):
             border += section.length_km
-            for z in sorted({*recorded_km, border}):
-                if start + tiny < z <= border + tiny:
-                    recorded = any(abs(z - wanted) <= tiny for wanted in recorded_km)
-                    yield index, start, min(z, border), recorded
-                    start = min(z, border)
+            inside = [z for z in recorded_km if start + tiny < z < border - tiny]
+            seen_at_border = any(abs(z - border) <= tiny for z in recorded_km)
+            for end, recorded in [*((z, True) for z in inside), (border, seen_at_border)]:
+                yield index, start, end, recorded
+                start = end
 
     def weights(self, scheme: Scheme, light: Light) -> Real:
         """Relative number of steps each stretch deserves: ∫ c^{1/(p+1)} dz.
@@ -96,21 +97,23 @@ class Track:
         the linear rate l and the Kerr rate n, c = n l (n + l)^{p−1}. Steps that err equally
         then have the density c^{1/(p+1)}.
         """
+        if self._weighed and self._weighed[0] is scheme and self._weighed[1] is light:
+            return self._weighed[2]
         p = scheme.order
         weights = []
         power = light.power_w
+        rates = [_linear_rate(section.rate, light.density) for section in self.sections]
         for index, start, end, _ in self._stretches:
             section = self.sections[index]
             decay = math.exp(-section.attenuation_per_km * (end - start))
             kerr = 0.5 * (section.kerr_self + section.kerr_cross) * power * math.sqrt(decay)
-            phase = section.rate.imag
-            mean = (light.density * phase).sum(axis=1, keepdims=True)
-            linear = math.sqrt(float((light.density * (phase - mean) ** 2).sum() / 2))
+            linear = rates[index]
             weights.append(
                 (end - start) * (kerr * linear * (kerr + linear) ** (p - 1)) ** (1 / (p + 1))
             )
             power *= decay
-        return np.array(weights)
+        self._weighed = scheme, light, np.array(weights)
+        return self._weighed[2]
 
     def expected_steps(self, scheme: Scheme, light: Light, tolerance: float) -> float:
         """Number of steps that should meet a tolerance, from the light at the input alone."""
@@ -251,6 +254,12 @@ class Track:
         first = bins - max(1, round(bins * EDGE))
         edge = band_energy(spectrum, first, self.grid.samples - first)
         return float(np.max(edge / np.maximum(total, np.finfo(float).tiny)))
+
+
+def _linear_rate(rate: Complex, density: Real) -> float:
+    """Spread of the linear phase rate over a spectrum, both components, rad/km."""
+    mean = (density * rate.imag).sum(axis=1, keepdims=True)
+    return math.sqrt(float((density * (rate.imag - mean) ** 2).sum() / 2))
 
 
 def _turn_axes(field: Field, axes: Complex) -> None:
