@@ -1,0 +1,259 @@
+"""Plain numpy oracles: slow, obvious, and written without looking at the compiled code.
+
+Kernels carry the name of the compiled one they stand beside. Exact solutions say where they
+were published; every one of them is also put into the equation it solves by a test.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+from scipy.integrate import solve_ivp
+
+from solver.experiment import Span
+
+Array = npt.NDArray[np.complex128]
+Real = npt.NDArray[np.float64]
+
+
+def kerr_rotation(field: Array, self_phase: float, cross_phase: float) -> Array:
+    """The exact Kerr flow of fields of shape (realizations, 2, samples)."""
+    field = np.asarray(field, dtype=np.complex128)
+    power = np.abs(field) ** 2
+    return field * np.exp(1j * (self_phase * power + cross_phase * power[:, ::-1]))
+
+
+def linear_flow(spectrum: Array, operator: Array) -> Array:
+    """Every realization times one operator of shape (2, samples)."""
+    return np.asarray(spectrum, dtype=np.complex128) * np.asarray(operator, dtype=np.complex128)
+
+
+def band_energy(spectrum: Array, first: int, last: int) -> Real:
+    """Energy of each realization in bins first to last − 1."""
+    return np.sum(np.abs(np.asarray(spectrum, np.complex128)[:, :, first:last]) ** 2, axis=(1, 2))
+
+
+def intensity_moments(field: Array) -> Real:
+    """Time means of I1, I2, I1², I2², I1·I2; shape (realizations, 5)."""
+    i1, i2 = np.moveaxis(np.abs(np.asarray(field, dtype=np.complex128)) ** 2, 1, 0)
+    return np.stack([np.mean(x, axis=1) for x in (i1, i2, i1 * i1, i2 * i2, i1 * i2)], axis=1)
+
+
+@dataclass(frozen=True)
+class Glass:
+    """Coefficients of one piece of fibre, α in 1/km, worked out without the solver."""
+
+    length_km: float
+    beta2: float = 0.0
+    beta3: float = 0.0
+    alpha: float = 0.0
+    gamma: float = 0.0
+    own: float = 8 / 9
+    other: float = 8 / 9
+    delay: float = 0.0
+
+    def span(self) -> Span:
+        """The same piece in the solver's words."""
+        return Span(
+            length_km=self.length_km,
+            beta2_ps2_per_km=self.beta2,
+            beta3_ps3_per_km=self.beta3,
+            loss_db_per_km=self.alpha * 10.0 / np.log(10.0),
+            gamma_per_w_km=self.gamma,
+            coupling="custom",
+            self_coefficient=self.own,
+            cross_coefficient=self.other,
+            delay_ps_per_km=self.delay,
+        )
+
+    def rate(self, omega: Real) -> Array:
+        """Linear operator in the Fourier domain, 1/km; shape (2, samples)."""
+        common = -self.alpha / 2 + 1j * (self.beta2 * omega**2 / 2 - self.beta3 * omega**3 / 6)
+        return np.stack([common - 0.5j * self.delay * omega, common + 0.5j * self.delay * omega])
+
+    def kerr(self, field: Array) -> Array:
+        """The Kerr term of the equation, components on the last axis but one."""
+        power = np.abs(field) ** 2
+        turned = self.own * power + self.other * np.flip(power, axis=-2)
+        return np.asarray(1j * self.gamma * turned * field)
+
+
+def angular_frequency(samples: int, time_step_ps: float) -> Real:
+    """rad/ps, in FFT order."""
+    return 2.0 * np.pi * np.fft.fftfreq(samples, time_step_ps)
+
+
+def time_axis(samples: int, time_step_ps: float) -> Real:
+    """ps, zero in the middle."""
+    return (np.arange(samples) - samples // 2) * time_step_ps
+
+
+def derivative(field: Array, time_step_ps: float) -> Array:
+    """∂/∂t along the last axis of a periodic field."""
+    omega = angular_frequency(field.shape[-1], time_step_ps)
+    return np.asarray(np.fft.ifft(1j * omega * np.fft.fft(field)))
+
+
+def right_side(field: Array, time_step_ps: float, glass: Glass) -> Array:
+    """∂A/∂z of fields of shape (…, 2, samples), term by term in the time domain."""
+    first = derivative(field, time_step_ps)
+    second = derivative(first, time_step_ps)
+    third = derivative(second, time_step_ps)
+    sign = np.array([[1.0], [-1.0]])
+    return np.asarray(
+        -glass.alpha / 2 * field
+        - sign * glass.delay / 2 * first
+        - 0.5j * glass.beta2 * second
+        + glass.beta3 / 6 * third
+        + glass.kerr(field)
+    )
+
+
+def split_step(field: Array, time_step_ps: float, line: list[Glass], steps: int) -> Array:
+    """Symmetric second-order splitting, ``steps`` equal steps in each piece of the line."""
+    field = np.array(field, dtype=np.complex128)
+    omega = angular_frequency(field.shape[-1], time_step_ps)
+    for glass in line:
+        h = glass.length_km / steps
+        half = 0.5 * h * glass.gamma
+        flow = np.exp(glass.rate(omega) * h)
+        for _ in range(steps):
+            field = kerr_rotation(field, half * glass.own, half * glass.other)
+            field = np.fft.ifft(flow * np.fft.fft(field))
+            field = kerr_rotation(field, half * glass.own, half * glass.other)
+    return field
+
+
+def integrate(field: Array, time_step_ps: float, line: list[Glass], rtol: float) -> Array:
+    """One field of shape (2, samples) down a line, by DOP853 in the interaction picture.
+
+    The integrator knows nothing of splitting: a(z) = e^{−Lz}Â(z) obeys a' = e^{−Lz} F[Kerr].
+    """
+    shape = field.shape
+    omega = angular_frequency(shape[-1], time_step_ps)
+    spectrum = np.fft.fft(field).astype(np.complex128)
+    for glass in line:
+        rate = glass.rate(omega)
+
+        def slope(z: float, a: Array, rate: Array = rate, glass: Glass = glass) -> Array:
+            flow = np.exp(rate * z)
+            here = np.fft.ifft(flow * a.reshape(shape))
+            return np.asarray((np.fft.fft(glass.kerr(here)) / flow).ravel())
+
+        size = float(np.sqrt(np.mean(np.abs(spectrum) ** 2)))
+        solution = solve_ivp(
+            slope,
+            (0.0, glass.length_km),
+            spectrum.ravel(),
+            method="DOP853",
+            t_eval=[glass.length_km],
+            rtol=rtol,
+            atol=rtol * size,
+        )
+        spectrum = np.exp(rate * glass.length_km) * solution.y[:, -1].reshape(shape)
+    return np.asarray(np.fft.ifft(spectrum))
+
+
+def hamiltonian(field: Array, time_step_ps: float, glass: Glass) -> float:
+    """Invariant of a lossless piece: linear phase rates weighted by the spectrum, and Kerr energy.
+
+    i∂A_j/∂z = −∂H/∂A_j* with H = Σ φ_j(ω)|Â_j|² + γ∫ c_self(|A_1|⁴ + |A_2|⁴)/2 + c_cross|A_1 A_2|²
+    (standard form of coupled Schrödinger equations, e.g. Agrawal, Nonlinear Fiber Optics).
+    """
+    omega = angular_frequency(field.shape[-1], time_step_ps)
+    density = np.abs(np.fft.fft(field)) ** 2 / field.shape[-1]
+    linear = np.sum(glass.rate(omega).imag * density)
+    p, q = np.abs(field) ** 2
+    kerr = glass.gamma * np.sum(glass.own * (p**2 + q**2) / 2 + glass.other * p * q)
+    return float((linear + kerr) * time_step_ps)
+
+
+def momentum(field: Array, time_step_ps: float) -> float:
+    """Σ ω|Â|² of both components, W·ps·rad/ps."""
+    omega = angular_frequency(field.shape[-1], time_step_ps)
+    density = np.abs(np.fft.fft(field)) ** 2 / field.shape[-1]
+    return float(np.sum(omega * density) * time_step_ps)
+
+
+def rms_width(density: Real, axis: Real) -> float:
+    """Root-mean-square width of a density on an axis."""
+    mean = np.sum(axis * density) / np.sum(density)
+    return float(np.sqrt(np.sum((axis - mean) ** 2 * density) / np.sum(density)))
+
+
+def relative_l2(field: Array, exact: Array) -> float:
+    """Relative L2 distance."""
+    return float(np.linalg.norm(np.ravel(field - exact)) / np.linalg.norm(np.ravel(exact)))
+
+
+def manakov_soliton(time_ps: Real, z_km: float, glass: Glass, width_ps: float) -> Array:
+    """Scalar profile of the bright vector soliton; multiply by any unit polarization vector.
+
+    √P sech(t/T) e^{iγcPz/2} with γcPT² = |β2| (Manakov, Sov. Phys. JETP 38, 248, 1974).
+    """
+    strength = glass.gamma * glass.own
+    power_w = abs(glass.beta2) / (strength * width_ps**2)
+    return np.asarray(
+        np.sqrt(power_w) / np.cosh(time_ps / width_ps) * np.exp(0.5j * strength * power_w * z_km)
+    )
+
+
+def manakov_pair(
+    time_ps: Real, z_km: float, glass: Glass, k: tuple[complex, complex], polarization: Array
+) -> Array:
+    """Two colliding bright vector solitons, exactly; shape (2, samples).
+
+    k: inverse width (real part, 1/ps) and velocity (imaginary part) of each. polarization:
+    row j is the complex vector of soliton j that also fixes its place. The bilinear form of
+    Radhakrishnan, Lakshmanan and Hietarinta, Phys. Rev. E 56, 2213 (1997), from memory; a test
+    puts it into the equation.
+    """
+    mu = glass.gamma * glass.own / abs(glass.beta2)
+    zeta = abs(glass.beta2) * z_km / 2
+    k1, k2 = k
+    c1, c2 = np.conj(k1), np.conj(k2)
+    a1, a2 = polarization
+    e1, e2 = (np.exp(x * (time_ps + 1j * x * zeta)) for x in (k1, k2))
+    kappa11 = mu * np.vdot(a1, a1) / (k1 + c1)
+    kappa12 = mu * np.vdot(a2, a1) / (k1 + c2)
+    kappa21 = mu * np.vdot(a1, a2) / (k2 + c1)
+    kappa22 = mu * np.vdot(a2, a2) / (k2 + c2)
+    r1, r2 = kappa11 / (k1 + c1), kappa22 / (k2 + c2)
+    cross = kappa12 / (k1 + c2)
+    r3 = abs(k1 - k2) ** 2 * (kappa11 * kappa22 - kappa12 * kappa21)
+    r3 /= (k1 + c1) * (k2 + c2) * abs(k1 + c2) ** 2
+    d1 = (k1 - k2) * (a1 * kappa21 - a2 * kappa11) / ((k1 + c1) * (c1 + k2))
+    d2 = (k2 - k1) * (a2 * kappa12 - a1 * kappa22) / ((k2 + c2) * (k1 + c2))
+    p1, p2 = np.abs(e1) ** 2, np.abs(e2) ** 2
+    below = 1 + p1 * r1 + 2 * (e1 * np.conj(e2) * cross).real + p2 * r2 + p1 * p2 * r3
+    above = np.outer(a1, e1) + np.outer(a2, e2) + np.outer(d1, p1 * e2) + np.outer(d2, e1 * p2)
+    return np.asarray(above / below)
+
+
+def domain_walls(
+    time_ps: Real, z_km: float, glass: Glass, amplitude: float, gap_ps: float
+) -> Array:
+    """A pair of polarization domain walls for c_self = 1, c_cross = 3, normal dispersion.
+
+    u = (A/2)(1 + tanh κt), v = (A/2)(1 − tanh κt), both times e^{iγA²z}, κ² = γA²/β2, solve the
+    equation exactly (own derivation: (1 − T + T²)(1 + T) = 1 + T³; solutions of this kind are
+    due to Haelterman and Sheppard, Phys. Rev. E 49, 3389, 1994). Two walls a ``gap_ps`` apart
+    make it periodic; they touch only by e^{−2κ·gap}.
+    """
+    kappa = np.sqrt(glass.gamma * amplitude**2 / glass.beta2)
+    steps = np.tanh(kappa * (time_ps + gap_ps / 2)) - np.tanh(kappa * (time_ps - gap_ps / 2)) - 1.0
+    phase = np.exp(1j * glass.gamma * amplitude**2 * z_km)
+    return np.asarray(amplitude / 2 * phase * np.stack([1.0 + steps, 1.0 - steps]))
+
+
+def stirred_light(
+    seed: int, realizations: int, samples: int, time_step_ps: float, fwhm_thz: float, power_w: float
+) -> Array:
+    """Gaussian light of a Gaussian spectrum in both components, of this mean power in each."""
+    stream = np.random.default_rng(seed)
+    frequency = np.fft.fftfreq(samples, time_step_ps)
+    amplitude = np.exp(-2.0 * np.log(2.0) * (frequency / fwhm_thz) ** 2)
+    parts = stream.standard_normal((2, realizations, 2, samples))
+    field = np.fft.ifft(amplitude * (parts[0] + 1j * parts[1]))
+    mean = np.mean(np.abs(field) ** 2, axis=(0, 2), keepdims=True)
+    return np.asarray(field * np.sqrt(power_w / mean))
