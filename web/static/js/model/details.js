@@ -6,6 +6,8 @@ import { keyOf } from "./run.js";
 
 const ROUND_MS = 350;
 const LONGEST_ROUND_MS = 5000;
+// One less than a browser's share for the stream and one for everything else.
+const AT_ONCE = 4;
 
 export class Details {
   #wanted = [];
@@ -57,21 +59,27 @@ export class Details {
   }
 
   async #round() {
-    let failed = false;
-    for (const [variant, point] of this.#missing()) {
-      const revision = this.run.revision(variant, point);
-      try {
-        this.run.details.set(keyOf(variant, point), await get(api.detail(this.run.id, variant, point)));
-        this.fetched.set(keyOf(variant, point), revision);
-        if (!this.#stopped) this.arrived("detail", variant, point);
-      } catch {
-        failed = true;
-      }
-    }
-    await this.#fetchMap();
+    const batch = this.#missing().slice(0, AT_ONCE);
+    const outcomes = await Promise.all([
+      this.#fetchMap(), ...batch.map(([variant, point]) => this.#fetchDetail(variant, point)),
+    ]);
+    const failed = outcomes.includes(false);
     this.#timer = null;
-    this.#waitMs = failed ? Math.min(LONGEST_ROUND_MS, 2 * this.#waitMs) : ROUND_MS;
+    const pause = this.run.active ? ROUND_MS : 0;
+    this.#waitMs = failed ? Math.min(LONGEST_ROUND_MS, 2 * Math.max(this.#waitMs, ROUND_MS)) : pause;
     if (this.#missing().length || this.#mapWanted) this.#schedule(this.#waitMs);
+  }
+
+  async #fetchDetail(variant, point) {
+    const revision = this.run.revision(variant, point);
+    try {
+      this.run.details.set(keyOf(variant, point), await get(api.detail(this.run.id, variant, point)));
+    } catch {
+      return false;
+    }
+    this.fetched.set(keyOf(variant, point), revision);
+    if (!this.#stopped) this.arrived("detail", variant, point);
+    return true;
   }
 
   async #fetchMap() {

@@ -5,10 +5,13 @@ export const POWER_PATH = "launch.total_power_mw";
 export const dbmFromMw = (mw) => 10 * Math.log10(mw);
 export const mwFromDbm = (dbm) => 10 ** (dbm / 10);
 
+// Rounding leaves such a residue where a closed form is zero; no quantity here is this small.
+const NOTHING = 1e-15;
+
 /** A number at a given count of significant digits, without trailing zeros. */
 export function brief(value, digits = 4) {
   if (value === null || value === undefined || !Number.isFinite(value)) return "–";
-  if (value === 0) return "0";
+  if (Math.abs(value) < NOTHING) return "0";
   const size = Math.abs(value);
   const text =
     size >= 1e6 || size < 1e-4

@@ -4,7 +4,7 @@ import { Details } from "../model/details.js";
 import { brief, sweepAxis } from "../model/quantities.js";
 import * as figures from "../plots/curves.js";
 import { dipFigure } from "../plots/dip.js";
-import { EvolutionPlot } from "../plots/evolution.js";
+import { edges, EvolutionPlot } from "../plots/evolution.js";
 import { Surface } from "../plots/surface.js";
 import { find, findAll } from "./elements.js";
 import { Legend } from "./legend.js";
@@ -13,6 +13,8 @@ import { fillReadout, fillRemarks, fillValues } from "./tables.js";
 import { powerUnit } from "./shell.js";
 
 const TABLES_MS = 500;
+// Length of the maps' close-up, in inverse widths of the source: some hundred domains.
+const CLOSE_UP_WIDTHS = 40;
 
 export class Results {
   #run = null;
@@ -33,6 +35,8 @@ export class Results {
     this.legend = new Legend(find(root, "legend"), () => this.#comparisonChanged());
     this.selection = new Selection(root, () => this.#selectionChanged());
     powerUnit.addEventListener("change", () => this.#run && this.#drawAll());
+    const whole = find(root, "whole-window");
+    whole.addEventListener("change", () => this.#run && this.#frameMaps());
     for (const button of findAll(root, "save")) {
       button.addEventListener("click", () => this.#save(button.dataset.save));
     }
@@ -52,6 +56,7 @@ export class Results {
     this.#details = new Details(run, (kind, variant, point) => this.#arrived(kind, variant, point));
     this.selection.open(run, this.sweep);
     this.legend.show(run.variants.map(({ name }) => name), this.selection.hidden);
+    this.#frameMaps();
     this.#drawAll();
   }
 
@@ -63,20 +68,23 @@ export class Results {
   took(type, changed) {
     if (type === "map") {
       const { variant, point } = this.#run.liveMap;
-      if (this.selection.following) this.selection.move({ variant, point });
       if (this.#mapShown?.variant === variant && this.#mapShown?.point === point) {
         for (const plot of this.maps) plot.grow();
       } else this.#drawMaps();
     } else if (type === "point") {
-      if (this.selection.following && !this.#run.liveMap) {
-        const { variant, point } = changed.at(-1);
-        this.selection.move({ variant, point });
-      }
+      if (this.selection.following) this.#followCurve();
       this.#drawDip();
       this.#details.stale();
       if (changed.some(({ has_map: has }) => has)) this.#drawMaps();
       this.#tablesSoon();
     } else if (type === "state") this.selection.refresh();
+  }
+
+  /** Go along with the variant's curve as it gets further. */
+  #followCurve() {
+    const { variant } = this.selection;
+    const furthest = this.#run.points[variant].findLastIndex((one) => one?.outcome === "completed");
+    if (furthest >= 0) this.selection.move({ variant, point: furthest });
   }
 
   /** /view was read again. */
@@ -162,14 +170,15 @@ export class Results {
       points: sweep.values.map((_, i) => this.#summaryAt(variant, i)),
     }));
     const where = atEnd ? "" : ` at ${brief(km)} km`;
-    this.#note("dip", atEnd ? "thick bars: standard error; thin wide bars: discretization error" : `at ${brief(km)} km`);
+    this.#note("dip", `at ${brief(km)} km`);
     this.plots.dip.draw(() => dipFigure({ curves, sweep, mark: sweep.values[point], where }));
   }
 
   #drawMaps() {
     const note = find(this.root, "map-note");
     const { variant, point } = this.selection;
-    const place = this.#run.mapNear(variant, point);
+    const live = this.#run.active ? this.#run.liveMap : null;
+    const place = (this.selection.following && live) || this.#run.mapNear(variant, point);
     this.root.querySelector(".panel-maps").classList.toggle("no-map", !place);
     if (!place) {
       note.textContent = this.#run.active ? "draws itself once its realization is under way" : "none is kept for this run";
@@ -177,12 +186,11 @@ export class Results {
     }
     const name = `one realization: ${this.#run.variants[place.variant].name} at ${this.sweep.text(place.point)}`;
     const same = place.variant === variant && place.point === point;
-    note.textContent = same ? name : `${name}, the nearest that is kept`;
+    note.textContent = same || live ? name : `${name}, the nearest that is kept`;
     const map = this.#run.map(place.variant, place.point);
     this.#mapShown = place;
     const km = this.selection.atEnd ? null : this.#run.axes.distance_km[this.selection.distance];
     for (const plot of this.maps) plot.show(map, this.#run.axes, km);
-    const live = this.#run.active && this.#run.liveMap;
     const streaming = live && live.variant === place.variant && live.point === place.point;
     if (!map.complete && !(streaming && map.filled[0])) this.#details.wantMap(place.variant, place.point);
   }
@@ -199,7 +207,9 @@ export class Results {
     const at = this.sweep.text(point);
     for (const key of ["auto", "spectra"]) this.#note(key, `${name} at ${at}`);
     for (const key of ["cross", "distance", "contrast", "durations"]) this.#note(key, `at ${at}`);
-    const blank = figures.blankFigure();
+    const summary = this.#run.summary(variant, point);
+    const flagged = summary && summary.outcome !== "completed";
+    const blank = figures.blankFigure(flagged ? `flagged: ${summary.outcome.replaceAll("_", " ")}` : "not computed yet");
     const { auto, spectra, cross, contrast, durations } = this.plots;
     auto.draw(() => (own ? figures.autoFigure(axes, own) : blank));
     spectra.draw(() => (own ? figures.spectraFigure(axes, own) : blank));
@@ -228,6 +238,19 @@ export class Results {
     if (!this.#run) return;
     fillValues(find(this.root, "values"), this.#run, this.sweep);
     fillRemarks(find(this.root, "remarks"), this.#run, this.sweep);
+  }
+
+  /** Show the whole window or a stretch in which single domains can be told apart. */
+  #frameMaps() {
+    const [from, to] = edges(this.#run.axes.map.time_ps);
+    const middle = (from + to) / 2;
+    const stretch = Math.min(to - from, CLOSE_UP_WIDTHS * 1000 / this.#run.study.experiment.source.width_ghz);
+    const whole = find(this.root, "whole-window").checked;
+    const span = whole ? [from, to] : [middle - stretch / 2, middle + stretch / 2];
+    for (const map of this.maps) {
+      map.span = span;
+      map.surface.resetAxes();
+    }
   }
 
   #zoomTogether(source, change) {

@@ -51,12 +51,14 @@ function valueText(summary) {
   return withError(summary.value, summary.standard_error) + tail;
 }
 
+const sentence = (text) => `${text.charAt(0).toUpperCase()}${text.slice(1)}${/[.!?]$/.test(text) ? "" : "."}`;
+
 /** What has to be said about points that are no values, or stopped early. */
 export function fillRemarks(box, run, sweep) {
   const { flagged, capped } = run.remarks();
   const name = ({ variant, point }) => `${run.variants[variant].name} at ${sweep.text(point)}`;
   const items = flagged.map((one) =>
-    make("li", { class: "flag" }, `${name(one)}: ${one.outcome.replaceAll("_", " ")}, not drawn as a value. ${one.advice}`),
+    make("li", { class: "flag" }, `${name(one)}: ${one.outcome.replaceAll("_", " ")}, not drawn as a value. ${sentence(one.advice)}`),
   );
   if (capped.length) {
     const target = run.study.experiment.ensemble;

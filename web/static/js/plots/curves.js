@@ -4,14 +4,14 @@ import { componentColours, variantColour, variantMarker } from "../model/colour.
 import { axis } from "./surface.js";
 import { theme, token } from "./theme.js";
 
-/** What stands where nothing has been computed yet. */
-export function blankFigure() {
+/** A sentence where there is nothing to draw. */
+export function blankFigure(text) {
   return {
     traces: [],
     layout: {
       xaxis: { visible: false },
       yaxis: { visible: false },
-      annotations: [{ text: "not computed yet", showarrow: false, xref: "paper", yref: "paper", x: 0.5, y: 0.5 }],
+      annotations: [{ text, showarrow: false, xref: "paper", yref: "paper", x: 0.5, y: 0.5 }],
     },
   };
 }
@@ -155,6 +155,10 @@ export function contrastFigure(axes, shown) {
 
 export function durationsFigure(axes, shown) {
   const positive = (values) => values.map((y) => (y > 0 ? y : null));
+  const levels = shown.flatMap(({ detail }) => detail.durations.density.filter((y) => y > 0));
+  const range = levels.length
+    ? [Math.log10(Math.min(...levels)) - 0.4, Math.log10(Math.max(...levels)) + 0.3]
+    : undefined;
   return {
     traces: shown.map(({ index, name, detail }) => {
       const colour = variantColour(theme.name, index);
@@ -171,7 +175,7 @@ export function durationsFigure(axes, shown) {
     }),
     layout: {
       xaxis: axis("Domain duration (ps)", { zeroline: false, rangemode: "tozero" }),
-      yaxis: axis("Probability density (1/ps)", { type: "log", exponentformat: "power", dtick: 1 }),
+      yaxis: axis("Probability density (1/ps)", { type: "log", range, exponentformat: "power", dtick: 1 }),
     },
   };
 }

@@ -13,11 +13,23 @@ const KINDS = [
   { title: "I2 (mW)", colours: INTENSITY_MAPS[1], intervalMs: 200 },
 ];
 
-/** Colours as 32-bit words in the byte order of a canvas. */
-function words(colours) {
+// Peaks of thermal light reach far above its mean: the top colour stands for half the full scale
+// and above, so that the mean does not drown in black. The colour bar says ≥ there.
+const INTENSITY_CEILING = 0.5;
+
+/** Colours as 32-bit words in the byte order of a canvas; the last one is reached at the ceiling. */
+function words(colours, ceiling) {
   const table = new Uint8Array(4 * 256);
-  colours.forEach(([red, green, blue], i) => table.set([red, green, blue, 255], 4 * i));
+  for (let i = 0; i < 256; i += 1) {
+    table.set([...colours[Math.min(255, Math.round(i / ceiling))], 255], 4 * i);
+  }
   return new Uint32Array(table.buffer);
+}
+
+/** Outer edges of cells that have these centres. */
+export function edges(centres) {
+  const half = centres.length > 1 ? (centres[1] - centres[0]) / 2 : 0.5;
+  return [centres[0] - half, centres.at(-1) + half];
 }
 
 export class EvolutionPlot {
@@ -27,12 +39,13 @@ export class EvolutionPlot {
   #axes = null;
   #markKm = null;
   #timer = null;
+  #span = null;
 
   /** plane: 0 contrast, 1 and 2 the intensities; readout: element that tells what is under the pointer. */
   constructor(element, plane, readout) {
     this.plane = plane;
     this.kind = KINDS[plane];
-    this.words = words(this.kind.colours);
+    this.words = words(this.kind.colours, plane === 0 ? 1 : INTENSITY_CEILING);
     this.surface = new Surface(element);
     this.readout = readout;
     this.zoomed = () => {};
@@ -54,6 +67,12 @@ export class EvolutionPlot {
       this.#paint();
       this.surface.draw(() => this.#figure());
     }
+  }
+
+  /** The stretch of time in view, [from, to] in ps. */
+  set span(span) {
+    this.#span = span;
+    if (this.#map) this.surface.draw(() => this.#figure());
   }
 
   /** Rows have been added to the map shown. */
@@ -87,10 +106,10 @@ export class EvolutionPlot {
 
   #figure() {
     const { distance_km: distances, time_ps: times } = this.#axes.map;
-    const ends = (values) => [values[0], values.at(-1)];
-    const [t0, t1] = ends(times);
-    const [z0, z1] = ends(distances);
-    const top = this.plane === 0 ? 1 : 255e3 * this.#map.scale || 1;
+    const [t0, t1] = edges(times);
+    const [z0, z1] = edges(distances);
+    const limits = { range: this.#span ?? [t0, t1], minallowed: t0, maxallowed: t1 };
+    const bounds = this.plane === 0 ? [-1, 1] : [0, 255e3 * INTENSITY_CEILING * this.#map.scale || 1];
     this.scaleShown = this.#map.scale;
     const corners = {
       type: "heatmap", x: [t0, t1], y: [z0, z1], z: [[0, 0], [0, 0]],
@@ -99,10 +118,10 @@ export class EvolutionPlot {
     const bar = {
       type: "scatter", mode: "markers", x: [null], y: [null], hoverinfo: "skip", showlegend: false,
       marker: {
-        color: [0], cmin: this.plane === 0 ? -1 : 0, cmax: top, showscale: true,
+        color: [0], cmin: bounds[0], cmax: bounds[1], showscale: true,
         colorscale: scaleOf(this.kind.colours),
         colorbar: {
-          thickness: 10, outlinewidth: 0, ticks: "outside", ticklen: 3, xpad: 6, nticks: 5,
+          thickness: 10, outlinewidth: 0, ticks: "outside", ticklen: 3, xpad: 6, ...this.#ticks(bounds),
           title: { text: this.kind.title, side: "right" },
         },
       },
@@ -110,9 +129,9 @@ export class EvolutionPlot {
     return {
       traces: [corners, bar],
       layout: {
-        margin: { l: 50, r: 8, t: 6, b: 38 },
-        xaxis: axis("Time (ps)", { range: [t0, t1], showgrid: false, zeroline: false }),
-        yaxis: axis("Distance (km)", { range: [z0, z1], showgrid: false, zeroline: false }),
+        margin: { l: 50, r: 8, t: 10, b: 38 },
+        xaxis: axis("Time (ps)", { ...limits, showgrid: false, zeroline: false }),
+        yaxis: axis("Distance (km)", { range: [distances[0], distances.at(-1)], nticks: 5, showgrid: false, zeroline: false }),
         plot_bgcolor: token("--unwritten"),
         images: [{
           source: this.#canvas.toDataURL(), xref: "x", yref: "y", x: t0, y: z1,
@@ -124,6 +143,13 @@ export class EvolutionPlot {
         }],
       },
     };
+  }
+
+  #ticks([low, high]) {
+    const tickvals = [0, 0.25, 0.5, 0.75, 1].map((share) => low + share * (high - low));
+    const ticktext = tickvals.map((value) => brief(value, 2));
+    if (this.plane !== 0) ticktext[4] = `≥${ticktext[4]}`;
+    return { tickmode: "array", tickvals, ticktext };
   }
 
   #listen(element) {
