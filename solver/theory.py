@@ -38,7 +38,9 @@ class LinearCorrelations:
 
 def linear_correlations(experiment: Experiment, grid: Grid) -> LinearCorrelations:
     """What the receiver would see of this experiment with the Kerr term off."""
-    line = sections(experiment.line, grid, experiment.source.wavelength_nm)
+    line = sections(
+        experiment.line, grid, experiment.source.wavelength_nm, experiment.ensemble.seed
+    )
     response = linear_response(line, input_response(experiment, grid))
     coherence = mutual_coherence(response)
     mean = coherence[[0, 1], [0, 1], 0].real
