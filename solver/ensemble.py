@@ -160,6 +160,8 @@ def pilot(bench: Bench, fields: Field) -> Pilot:
         if outcome.kind != "completed":
             return Pilot(count, np.nan, spent, outcome)
         (coarse, field, seen), (fine, finer, seen_finer) = runs
+        if bench.track.commutes(scheme, bench.light):
+            return Pilot(coarse, 0.0, spent)
         ratio = (fine / coarse) ** order
         error = richardson(relative_error(field, finer), fine / coarse, order) * ratio
         if error <= bench.tolerance:

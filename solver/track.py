@@ -94,7 +94,8 @@ class Track:
         """Relative number of steps each stretch deserves: ∫ c^{1/(p+1)} dz.
 
         A step of length h errs by about c h^{p+1}, with c of the size of nested commutators of
-        the linear rate l and the Kerr rate n, c = n l (n + l)^{p−1}. Steps that err equally
+        the linear rate l and the Kerr rate n, c = n l (n + l)^{p−1}. Loss α leaves the Kerr
+        term's form alone, so of its commutators only n α^p is there. Steps that err equally
         then have the density c^{1/(p+1)}.
         """
         if self._weighed and self._weighed[0] is scheme and self._weighed[1] is light:
@@ -108,12 +109,15 @@ class Track:
             decay = math.exp(-section.attenuation_per_km * (end - start))
             kerr = 0.5 * (section.kerr_self + section.kerr_cross) * power * math.sqrt(decay)
             linear = rates[index]
-            weights.append(
-                (end - start) * (kerr * linear * (kerr + linear) ** (p - 1)) ** (1 / (p + 1))
-            )
+            error = kerr * (linear * (kerr + linear) ** (p - 1) + section.attenuation_per_km**p)
+            weights.append((end - start) * error ** (1 / (p + 1)))
             power *= decay
         self._weighed = scheme, light, np.array(weights)
         return self._weighed[2]
+
+    def commutes(self, scheme: Scheme, light: Light) -> bool:
+        """Whether linear and Kerr flow commute all along, so that any steps are exact."""
+        return not self.weights(scheme, light).any()
 
     def expected_steps(self, scheme: Scheme, light: Light, tolerance: float) -> float:
         """Number of steps that should meet a tolerance, from the light at the input alone."""
