@@ -106,20 +106,21 @@ def _page(request: Request, name: str, **context: Any) -> Response:
     )
 
 
-def _bench(request: Request) -> Response:
-    return _page(request, "bench", sections=form.sections(), data=form.page_data())
+def _bench(request: Request, *, shows_run: bool) -> Response:
+    context = {"sections": form.sections(), "data": form.page_data(), "shows_run": shows_run}
+    return _page(request, "bench", **context)
 
 
 @router.get("/")
 def bench(request: Request) -> Response:
     """The bench with nothing run yet."""
-    return _bench(request)
+    return _bench(request, shows_run=False)
 
 
 @router.get("/runs/{identity}")
 def bench_of_run(request: Request, identity: str) -> Response:
     """The bench showing one run; its script reads the identity from the address."""
-    return _bench(request)
+    return _bench(request, shows_run=True)
 
 
 @router.get("/library")

@@ -102,7 +102,7 @@ def test_what_the_server_refuses_is_told_at_its_entry(
 
 def test_power_is_typed_in_dbm_or_mw_as_one_likes(form: Page, watch: Watch) -> None:
     watch.expect("ERR_FAILED")
-    form.get_by_text("dBm", exact=True).first.click()
+    form.get_by_role("radio", name="dBm").check()
     expect(_entry(form, "sweep.start")).to_have_value("6.9897")
     expect(form.locator('[data-summary="sweep"]')).to_contain_text("6.99 dBm to 29 dBm")
     assert _asked(form) == Study().model_dump(mode="json")

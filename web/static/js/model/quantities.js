@@ -17,7 +17,7 @@ export function brief(value, digits = 4) {
     size >= 1e6 || size < 1e-4
       ? value.toExponential(Math.max(0, digits - 1)).replace(/\.?0+e/, "e").replace("e+", "e")
       : String(Number(value.toPrecision(digits)));
-  return text.replace("-", "−");
+  return text.replaceAll("-", "−");
 }
 
 /** A value with its standard error, both to the error's second digit: −0.123 ± 0.010. */
