@@ -271,6 +271,8 @@ def _run(
         if snapshots is not None:
             snapshots[index - offset] = here
 
-    outcome = track.march(work, pieces, scheme, precision, edge_limit=limit, observe=observe)
+    outcome = track.march(
+        work, pieces, scheme, precision, edge_limit=limit, observe=observe, phases=bool(wanted)
+    )
     steps = sum(piece.steps for piece in pieces)
     return _Run(work.buffer.copy(), snapshots, steps, outcome)

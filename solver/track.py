@@ -16,7 +16,7 @@ from solver.transforms import COMPLEX, Transforms
 
 OutcomeKind = Literal["completed", "aliased", "non_finite", "under_resolved", "tolerance_not_met"]
 Observer = Callable[[int, Field], None]
-"""Called with the index of a recorded distance and the field there, powers exact, phases free."""
+"""Called with the index of a recorded distance and the field there."""
 
 EDGE = 1 / 16
 """Share of the samples, at each end of the band, that has to stay empty."""
@@ -177,6 +177,7 @@ class Track:
         edge_limit: float,
         guard: float = 0.0,
         observe: Observer | None = None,
+        phases: bool = False,
     ) -> Outcome:
         """Propagate ``work.buffer`` in place, as far as its outcome allows.
 
@@ -186,7 +187,8 @@ class Track:
         allowed at such an end is edge_limit times this.
 
         The Kerr turn that ends one step is put off until the next one, or until a phase is
-        needed: it leaves all powers alone.
+        needed: it leaves all powers alone. An observer of fields, not of powers only, asks for
+        ``phases``.
         """
         real = np.float32 if precision == "single" else np.float64
         rotate = kerr_rotation(real)
@@ -228,6 +230,8 @@ class Track:
                 _turn_axes(buffer, section.axes.conj().T)
             if piece.recorded:
                 recorded += 1
+                if phases:
+                    settle()
                 if observe is not None:
                     observe(recorded, buffer)
         settle()
