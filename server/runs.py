@@ -194,9 +194,11 @@ class Runs:
                 f"{study.sweep.points - 1}"
             )
         live = self._live.get(run_id)
+        found: PointResult | None = None
         if live is not None and record.state == "running":
             found = await live.execution.ask(lambda state: state.point(variant, point))
-        else:
+        if found is None:
+            # Between the last task and the written file the execution answers no more.
             _, result = await self.open_result(run_id)
             found = result.points[variant][point]
         if found is None:
@@ -242,6 +244,9 @@ class Runs:
             while not self._queue:
                 self._queued.clear()
                 await self._queued.wait()
+            await self._engine.ready()
+            if not self._queue:
+                continue
             run_id = self._queue.popleft()
             try:
                 await self._conduct(run_id)

@@ -4,7 +4,9 @@ import { api } from "./links.js";
 import { get, getMap } from "./requests.js";
 import { keyOf } from "./run.js";
 
-const ROUND_MS = 350;
+// While a run goes on, the server and the workers need the cores more than these plots do.
+const ROUND_MS = 300;
+const ACTIVE_ROUND_MS = 1200;
 const LONGEST_ROUND_MS = 5000;
 // One less than a browser's share for the stream and one for everything else.
 const AT_ONCE = 4;
@@ -13,6 +15,7 @@ export class Details {
   #wanted = [];
   #mapWanted = null;
   #timer = null;
+  #busy = false;
   #waitMs = ROUND_MS;
   #stopped = false;
 
@@ -26,18 +29,20 @@ export class Details {
   /** Keep these points' details fresh: a list of [variant, point]. */
   want(points) {
     this.#wanted = points;
-    this.#schedule(0);
+    this.#schedule(this.run.active && this.fetched.size ? ACTIVE_ROUND_MS : 0);
   }
 
   /** Fetch the whole map of a point unless it is here already. */
   wantMap(variant, point) {
     this.#mapWanted = [variant, point];
+    clearTimeout(this.#timer);
+    this.#timer = null;
     this.#schedule(0);
   }
 
   /** Points have changed: fetch again those in view. */
   stale() {
-    this.#schedule(ROUND_MS);
+    this.#schedule(ACTIVE_ROUND_MS);
   }
 
   stop() {
@@ -46,7 +51,7 @@ export class Details {
   }
 
   #schedule(waitMs) {
-    if (this.#stopped || this.#timer !== null) return;
+    if (this.#stopped || this.#busy || this.#timer !== null) return;
     this.#timer = setTimeout(() => this.#round(), waitMs);
   }
 
@@ -54,18 +59,22 @@ export class Details {
     return this.#wanted.filter(([variant, point]) => {
       const summary = this.run.summary(variant, point);
       if (!summary || summary.outcome !== "completed") return false;
+      const known = this.fetched.has(keyOf(variant, point));
+      if (known && this.run.active && !summary.final) return false;
       return this.fetched.get(keyOf(variant, point)) !== this.run.revision(variant, point);
     });
   }
 
   async #round() {
+    this.#timer = null;
+    this.#busy = true;
     const batch = this.#missing().slice(0, AT_ONCE);
     const outcomes = await Promise.all([
       this.#fetchMap(), ...batch.map(([variant, point]) => this.#fetchDetail(variant, point)),
     ]);
     const failed = outcomes.includes(false);
-    this.#timer = null;
-    const pause = this.run.active ? ROUND_MS : 0;
+    this.#busy = false;
+    const pause = this.run.active ? ACTIVE_ROUND_MS : 0;
     this.#waitMs = failed ? Math.min(LONGEST_ROUND_MS, 2 * Math.max(this.#waitMs, ROUND_MS)) : pause;
     if (this.#missing().length || this.#mapWanted) this.#schedule(this.#waitMs);
   }

@@ -18,6 +18,7 @@ export class Run {
   renew(view) {
     const { study, sequence, axes, variants, points, live_map: liveMap, ...row } = view;
     Object.assign(this, { row, study, sequence, axes, variants, points, liveMap });
+    this.viewed = sequence;
   }
 
   get id() {
@@ -34,6 +35,20 @@ export class Run {
 
   detail(variant, point) {
     return this.details.get(keyOf(variant, point)) ?? null;
+  }
+
+  /** Whether an event is later than /view; the map's earlier rows are played again besides. */
+  isNews(id) {
+    const [epoch, number] = this.viewed.split("-");
+    const [itsEpoch, itsNumber] = id.split("-");
+    return epoch !== itsEpoch || Number(itsNumber) > Number(number);
+  }
+
+  /** Where to follow the stream from: its start when a growing map has to be made up for. */
+  get followFrom() {
+    const growing = this.active && this.liveMap;
+    const known = growing && this.maps.has(keyOf(growing.variant, growing.point));
+    return growing && !known ? "" : this.sequence;
   }
 
   /** Take in one event; returns the point summaries that it changed. */

@@ -40,7 +40,7 @@ function follow() {
   feed = new Feed({
     address: (after) => api.runEvents(own.id, after),
     types: EVENT_TYPES,
-    after: own.sequence,
+    after: own.followFrom,
     take: (type, event) => take(own, type, event),
     broken: (isBroken) => status.broken(isBroken),
   });
@@ -54,6 +54,7 @@ function take(own, type, event) {
     reread(own);
     return;
   }
+  if (type !== "map" && !own.isNews(feed.after)) return;
   const changed = own.apply(type, event);
   if (type === "state" || type === "progress") status.refresh();
   results.took(type, changed);

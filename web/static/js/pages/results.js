@@ -28,9 +28,9 @@ export class Results {
     const readout = find(root, "map-readout");
     this.maps = [0, 1, 2].map((plane) => new EvolutionPlot(box(`map-${plane}`), plane, readout));
     for (const map of this.maps) map.zoomed = (change) => this.#zoomTogether(map, change);
-    this.plots = { dip: new Surface(box("dip"), { intervalMs: 200 }) };
+    this.plots = { dip: new Surface(box("dip"), { intervalMs: 300 }) };
     for (const key of ["cross", "auto", "spectra", "distance", "contrast", "durations"]) {
-      this.plots[key] = new Surface(box(key), { intervalMs: 400 });
+      this.plots[key] = new Surface(box(key), { intervalMs: 500 });
     }
     this.legend = new Legend(find(root, "legend"), () => this.#comparisonChanged());
     this.selection = new Selection(root, () => this.#selectionChanged());
@@ -191,8 +191,7 @@ export class Results {
     this.#mapShown = place;
     const km = this.selection.atEnd ? null : this.#run.axes.distance_km[this.selection.distance];
     for (const plot of this.maps) plot.show(map, this.#run.axes, km);
-    const streaming = live && live.variant === place.variant && live.point === place.point;
-    if (!map.complete && !(streaming && map.filled[0])) this.#details.wantMap(place.variant, place.point);
+    if (!map.complete && this.#run.summary(place.variant, place.point)?.has_map) this.#details.wantMap(place.variant, place.point);
   }
 
   #drawPoint() {

@@ -8,9 +8,9 @@ import { axis, Surface } from "./surface.js";
 import { token } from "./theme.js";
 
 const KINDS = [
-  { title: "Contrast", colours: CONTRAST_MAP, intervalMs: 67 },
-  { title: "I1 (mW)", colours: INTENSITY_MAPS[0], intervalMs: 200 },
-  { title: "I2 (mW)", colours: INTENSITY_MAPS[1], intervalMs: 200 },
+  { title: "Contrast", colours: CONTRAST_MAP, intervalMs: 80 },
+  { title: "I1 (mW)", colours: INTENSITY_MAPS[0], intervalMs: 400 },
+  { title: "I2 (mW)", colours: INTENSITY_MAPS[1], intervalMs: 400 },
 ];
 
 // Peaks of thermal light reach far above its mean: the top colour stands for half the full scale

@@ -17,6 +17,9 @@ export function plotly() {
   return library;
 }
 
+// The solver's workers share the machine with this page: a plot rests in proportion to its cost.
+const REST_FOR_WORK = 8;
+
 const CONFIG = { displayModeBar: false, responsive: false, doubleClick: "reset" };
 
 export function axis(title, more = {}) {
@@ -54,6 +57,7 @@ export class Surface {
   #last = 0;
   #inSight = false;
   #busy = false;
+  #cost = 0;
   #zoom = 0;
 
   /** element: the box; intervalMs: the shortest time between two redraws. */
@@ -64,7 +68,7 @@ export class Surface {
     new IntersectionObserver((entries) => {
       this.#inSight = entries.at(-1).isIntersecting;
       this.#schedule();
-    }, { rootMargin: "200px" }).observe(element);
+    }).observe(element);
     new ResizeObserver(() => this.#redrawKept()).observe(element);
     theme.addEventListener("change", () => this.#redrawKept());
   }
@@ -86,7 +90,8 @@ export class Surface {
 
   #schedule() {
     if (!this.#pending || !this.#inSight || this.#timer || this.#busy) return;
-    const wait = Math.max(0, this.#last + this.intervalMs - performance.now());
+    const pause = Math.max(this.intervalMs, REST_FOR_WORK * this.#cost);
+    const wait = Math.max(0, this.#last + pause - performance.now());
     this.#timer = setTimeout(() => {
       this.#timer = null;
       requestAnimationFrame(() => this.#flush());
@@ -99,6 +104,7 @@ export class Surface {
     if (!width || !height) return;
     this.#busy = true;
     const first = !this.#drawn;
+    const begun = performance.now();
     this.#drawn = this.#pending;
     this.#pending = null;
     try {
@@ -108,6 +114,7 @@ export class Surface {
       if (first) for (const act of this.afterFirst) act(library);
     } finally {
       this.#last = performance.now();
+      this.#cost = first ? 0 : this.#last - begun;
       this.#busy = false;
       this.#schedule();
     }
