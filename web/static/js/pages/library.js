@@ -81,7 +81,7 @@ function showTray() {
   part("tray").hidden = curves.length === 0;
   part("tray-curves").replaceChildren(...curves.map((curve) => {
     const title = curve.title ?? rows.get(curve.run)?.row.title ?? curve.run;
-    const text = `${title}: ${curve.name ?? `variant ${curve.variant + 1}`}`;
+    const text = `${curve.name ?? `variant ${curve.variant + 1}`} · ${title}`;
     return make("button", {
       type: "button", class: "chip", title: `${text} (click to take out)`, "aria-label": `Take out ${text}`,
       onclick: () => { chosen.delete(keyOf(curve)); showTray(); },

@@ -29,10 +29,18 @@ async function load() {
     say(part("fault"), refusal.message);
     return;
   }
-  names = overlay.curves.map(({ title, name }) => `${title}: ${name}`);
+  names = namesOf(overlay.curves);
   part("body").hidden = false;
   legend.show(names);
   draw();
+}
+
+/** Names that tell the curves apart: variant and run, with the run's identity where titles repeat. */
+function namesOf(curves) {
+  const titles = new Map();
+  for (const { title, run } of curves) titles.set(title, (titles.get(title) ?? new Set()).add(run));
+  return curves.map(({ name, title, run }) =>
+    titles.get(title).size > 1 ? `${name} · ${title} (${run.slice(0, 4)})` : `${name} · ${title}`);
 }
 
 function draw() {

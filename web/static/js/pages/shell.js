@@ -2,6 +2,7 @@
 
 import { api } from "../model/links.js";
 import { get } from "../model/requests.js";
+import "../plots/theme.js";
 import { find, findAll, make } from "./elements.js";
 
 const TOAST_MS = 8000;
@@ -61,7 +62,6 @@ export async function openPage() {
     themeChoice.set(select.value);
     document.documentElement.dataset.theme = select.value;
   });
-  followPrinting();
   let mayWrite = true;
   try {
     mayWrite = (await get(api.access)).may === "write";
@@ -71,14 +71,8 @@ export async function openPage() {
   find(document, "look-only").hidden = mayWrite;
   document.body.classList.toggle("may-only-look", !mayWrite);
   for (const button of findAll(document, "needs-write")) button.disabled = !mayWrite;
+  for (const title of findAll(document, "run-title")) title.readOnly = !mayWrite;
   return mayWrite;
-}
-
-// Paper is white: plots are redrawn in the light theme while the page is printed.
-function followPrinting() {
-  const root = document.documentElement;
-  addEventListener("beforeprint", () => { root.dataset.theme = "light"; });
-  addEventListener("afterprint", () => { root.dataset.theme = themeChoice.get(); });
 }
 
 /** A short message, with one thing that may be done about it. */

@@ -59,7 +59,6 @@ export class Status {
     const active = this.#run.active;
     this.part("cancel").hidden = !active;
     this.part("resume").hidden = !(state === "cancelled" || state === "failed");
-    this.part("resume").textContent = state === "failed" ? "Try again" : "Continue";
     this.#showProgress(row, active);
     this.#showDownloads(state);
   }
@@ -80,7 +79,7 @@ export class Status {
       return `At ${brief(100 * fraction, 3)} %: ${counts}. What was computed is kept; Continue goes on from it.`;
     }
     if (state === "failed") {
-      return `${message || "The server could not finish this run."} What was computed is kept; Try again goes on from it.`;
+      return message || "The server could not finish this run. What was computed is kept; Continue goes on from it.";
     }
     return counts;
   }

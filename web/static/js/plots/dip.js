@@ -100,7 +100,8 @@ function flagTrace(curve) {
  */
 export function dipFigure({ curves, sweep, top = null, mark = null, where = "" }) {
   const traces = curves.flatMap((curve) => [...valueTraces(curve), ...flagTrace(curve)]);
-  const scale = ({ logarithmic }) => ({ type: logarithmic ? "log" : "linear", zeroline: false });
+  const scale = ({ logarithmic }) =>
+    logarithmic ? { type: "log", dtick: "D2", zeroline: false } : { type: "linear", zeroline: false };
   const layout = {
     xaxis: axis(sweep.title, scale(sweep)),
     yaxis: axis(`C12(0)${where}`, {

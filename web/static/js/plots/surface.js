@@ -71,6 +71,7 @@ export class Surface {
     }).observe(element);
     new ResizeObserver(() => this.#redrawKept()).observe(element);
     theme.addEventListener("change", () => this.#redrawKept());
+    theme.addEventListener("print", () => this.#printNow());
   }
 
   /** make() returns {traces, layout}; it is called when the plot is really drawn. */
@@ -109,8 +110,7 @@ export class Surface {
     this.#pending = null;
     try {
       const library = await plotly();
-      const { traces, layout } = this.#drawn();
-      await library.react(this.element, traces, { ...baseLayout(), uirevision: this.#zoom, width, height, ...layout }, CONFIG);
+      await this.#react(library, width, height);
       if (first) for (const act of this.afterFirst) act(library);
     } finally {
       this.#last = performance.now();
@@ -118,6 +118,20 @@ export class Surface {
       this.#busy = false;
       this.#schedule();
     }
+  }
+
+  #react(library, width, height) {
+    const { traces, layout } = this.#drawn();
+    const size = { uirevision: this.#zoom, width, height };
+    return library.react(this.element, traces, { ...baseLayout(), ...size, ...layout }, CONFIG);
+  }
+
+  /** Draw at once and in or out of sight: a page being printed waits for nobody. */
+  #printNow() {
+    const { width, height } = this.element.getBoundingClientRect();
+    this.#drawn = this.#pending ?? this.#drawn;
+    this.#pending = null;
+    if (this.#drawn && window.Plotly && width) this.#react(window.Plotly, width, height);
   }
 
   /** Replace the source of layout image i, without a full redraw. */
