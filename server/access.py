@@ -19,8 +19,9 @@ import secrets
 import time
 from collections import OrderedDict
 from datetime import UTC, datetime, timedelta
+from html import escape
 from http.cookies import CookieError, SimpleCookie
-from urllib.parse import parse_qs
+from urllib.parse import parse_qs, quote
 
 from starlette.datastructures import Headers
 from starlette.requests import Request
@@ -163,7 +164,7 @@ class Gate:
                 raise NotSignedIn("open the link with the access key that you were given")
             if request.headers.get("sec-fetch-site") == "cross-site":
                 # A strict cookie stays at home on a click from another site: come in again.
-                return _arrive(str(request.url.replace(scheme="", netloc="")))
+                return _arrive(request.url.path, request.url.query)
             return RedirectResponse("/enter", 303)
         if may != "write" and request.method not in SAFE_METHODS:
             raise Forbidden("this access key may only look: ask for the key that may change things")
@@ -230,10 +231,10 @@ def _name_of(host: str) -> str:
     return host.partition("]")[0] + "]" if host.startswith("[") else host.partition(":")[0]
 
 
-def _arrive(path: str) -> Response:
+def _arrive(path: str, query: str = "") -> Response:
     """A page that leads on at once: a redirect would still count as the other site's request."""
-    target = path if path.startswith("/") and not path.startswith("//") else "/"
-    target = target.replace("&", "&amp;").replace('"', "&quot;").replace("<", "&lt;")
+    target = "/" + quote(path.lstrip("/")) + (f"?{quote(query, safe='=&:%+')}" if query else "")
+    target = escape(target)
     return HTMLResponse(
         '<!doctype html><html lang="en"><head><meta charset="utf-8"><title>Crossdip</title>'
         f'<meta http-equiv="refresh" content="0;url={target}"></head>'

@@ -34,7 +34,11 @@ async def _run_log(run_id: InPath, runs: TheRuns) -> EventLog:
 
 async def within_limits(request: Request) -> None:
     """Refuse an oversize study before its model is built."""
-    refuse_oversize(await request.json(), request.app.state.settings)
+    try:
+        body = await request.json()
+    except ValueError:
+        return  # an empty body, say: validation has the words for it
+    refuse_oversize(body, request.app.state.settings)
 
 
 TheLog = Annotated[EventLog, Depends(_run_log)]

@@ -45,7 +45,7 @@ class Engine:
         self._client: Any = None
         self._ready = asyncio.Event()
         self._keeper: asyncio.Task[None] | None = None
-        self._stopped = False
+        self._foreign_workers = 0
         self.condition: Condition = "starting"
         self.tasks_done = 0
 
@@ -56,7 +56,7 @@ class Engine:
             return 0
         if self._cluster is not None:
             return len(self._cluster.scheduler.workers)
-        return len(self._client.scheduler_info(n_workers=-1)["workers"])
+        return self._foreign_workers
 
     def start(self, warm: Callable[[], object] | None = None) -> None:
         """Bring the workers up in the background; ``warm`` is run once on each of them."""
@@ -64,7 +64,6 @@ class Engine:
 
     async def stop(self) -> None:
         """End the workers this engine started; a foreign cluster is only left."""
-        self._stopped = True
         self._ready.clear()
         if self._keeper is not None:
             self._keeper.cancel()
@@ -75,6 +74,10 @@ class Engine:
         if self._cluster is not None:
             with contextlib.suppress(Exception):
                 await self._cluster.close(timeout=1.5)
+
+    async def ready(self) -> None:
+        """Wait until tasks are taken."""
+        await self._ready.wait()
 
     async def run(self, function: Callable[..., Any], *args: Any, priority: int = 0) -> Any:
         """The function's value, computed by some worker; larger priorities go first.
@@ -134,6 +137,9 @@ class Engine:
                 self.condition = "ready" if connected else "lost"
                 if connected:
                     self._ready.set()
+                    if self._cluster is None:
+                        with contextlib.suppress(OSError):
+                            self._foreign_workers = len(await self._client.ncores())
                 else:
                     self._ready.clear()
                 await asyncio.sleep(_WATCH_INTERVAL_S)

@@ -124,7 +124,11 @@ def claim_folder(folder: Path) -> TextIO:
     """
     folder.mkdir(parents=True, exist_ok=True)
     held = (folder / "lock").open("a")
-    fcntl.flock(held, fcntl.LOCK_EX | fcntl.LOCK_NB)
+    try:
+        fcntl.flock(held, fcntl.LOCK_EX | fcntl.LOCK_NB)
+    except OSError:
+        held.close()
+        raise
     return held
 
 

@@ -8,9 +8,9 @@ import pytest
 from tests.serving import LiveServer
 
 
-@pytest.fixture(scope="module")
+@pytest.fixture(scope="session")
 def server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[LiveServer]:
-    """A server of its own for one module, on a free port of 127.0.0.1."""
+    """The server that tests share, on a free port; each test has seeds of its own."""
     live = LiveServer(tmp_path_factory.mktemp("data"))
     live.start()
     yield live

@@ -15,7 +15,7 @@ from typing import Any
 import httpx
 
 ROOT = Path(__file__).parent.parent
-TIMEOUT_S = 30.0
+TIMEOUT_S = 90.0
 
 TINY: dict[str, Any] = {
     "experiment": {
@@ -59,6 +59,23 @@ def lengthy(seed: int) -> dict[str, Any]:
     return study
 
 
+def crossdip(*arguments: str) -> subprocess.CompletedProcess[str]:
+    """A command line run to its end."""
+    return subprocess.run(
+        [sys.executable, "-m", "server", *arguments],
+        cwd=ROOT,
+        env=_environment(),
+        capture_output=True,
+        text=True,
+        timeout=2 * TIMEOUT_S,
+        check=False,
+    )
+
+
+def _environment() -> dict[str, str]:
+    return {k: v for k, v in os.environ.items() if not k.startswith("CROSSDIP_")}
+
+
 @dataclass(frozen=True)
 class Event:
     """One event as it came over the wire."""
@@ -86,13 +103,13 @@ class LiveServer:
         return self._process.pid
 
     def start(self, *extra: str) -> None:
-        """Start and wait until it listens."""
+        """Start, again if need be, and wait until it listens."""
+        self._forget()
         command = [sys.executable, "-m", "server", "serve", "--port", "0", "--data", str(self.data)]
-        environment = {k: v for k, v in os.environ.items() if not k.startswith("CROSSDIP_")}
         self._process = subprocess.Popen(
             [*command, "--workers", "2", *self._flags, *extra],
             cwd=ROOT,
-            env=environment,
+            env=_environment(),
             stdout=subprocess.PIPE,
             text=True,
         )
@@ -120,10 +137,13 @@ class LiveServer:
         if self._process is not None:
             if self._process.poll() is None:
                 self.signal(signal.SIGTERM)
-            assert self._process.stdout is not None
-            self._process.stdout.close()
-            self._process = None
+            self._forget()
         self.client.close()
+
+    def _forget(self) -> None:
+        if self._process is not None and self._process.stdout is not None:
+            self._process.stdout.close()
+        self._process = None
 
     def get(self, path: str, **options: Any) -> Any:
         """The JSON body of a GET that must succeed."""

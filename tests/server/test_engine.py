@@ -1,0 +1,114 @@
+"""The engine on a foreign scheduler that goes away and comes back, and on its own workers."""
+
+import asyncio
+import os
+import socket
+import subprocess
+import sys
+import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+
+import pytest
+
+from server.engine import Engine
+from tests.doubling import double_slowly
+from tests.serving import TIMEOUT_S
+
+
+def _fail() -> None:
+    raise ValueError("on purpose")
+
+
+def _environment_of_worker() -> dict[str, str | None]:
+    names = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "NUMBA_NUM_THREADS")
+    return {name: os.environ.get(name) for name in names}
+
+
+@contextmanager
+def _scheduler(port: int) -> Iterator[None]:
+    """A Dask scheduler with one worker, as an operator would run them."""
+    code = (
+        "import asyncio, distributed\n"
+        "async def main():\n"
+        f"    async with distributed.Scheduler(host='127.0.0.1', port={port},\n"
+        "            dashboard=False, dashboard_address='127.0.0.1:0') as scheduler:\n"
+        "        async with distributed.Worker(scheduler.address, nthreads=1):\n"
+        "            print('up', flush=True)\n"
+        "            await scheduler.finished()\n"
+        "asyncio.run(main())\n"
+    )
+    process = subprocess.Popen(
+        [sys.executable, "-c", code],
+        stdout=subprocess.PIPE,
+        stderr=subprocess.DEVNULL,
+        cwd=Path(__file__).parents[2],
+        text=True,
+    )
+    try:
+        assert process.stdout is not None
+        assert process.stdout.readline() == "up\n"
+        yield
+    finally:
+        process.kill()
+        process.wait()
+        if process.stdout is not None:
+            process.stdout.close()
+
+
+async def _until(condition: Callable[[], bool]) -> None:
+    while not condition():
+        await asyncio.sleep(0.02)
+
+
+def _free_port() -> int:
+    with socket.create_server(("127.0.0.1", 0)) as probe:
+        return int(probe.getsockname()[1])
+
+
+# The client leaves the sockets of a lost scheduler to the garbage collector.
+@pytest.mark.filterwarnings("ignore::pytest.PytestUnraisableExceptionWarning")
+@pytest.mark.filterwarnings("ignore::ResourceWarning")
+def test_a_scheduler_that_comes_back_gets_the_pending_tasks_again(tmp_path: Path) -> None:
+    port = _free_port()
+
+    async def check() -> None:
+        engine = Engine(1, tmp_path, f"tcp://127.0.0.1:{port}")
+        engine.start()
+        tasks = [asyncio.create_task(engine.run(double_slowly, number)) for number in range(100)]
+        with _scheduler(port):
+            await _until(lambda: engine.tasks_done >= 5)
+            await _until(lambda: (engine.condition, engine.workers) == ("ready", 1))
+        assert engine.tasks_done < 100
+        await _until(lambda: engine.condition == "lost")
+        with _scheduler(port):
+            assert await asyncio.gather(*tasks) == [2 * number for number in range(100)]
+            await engine.stop()
+
+    asyncio.run(asyncio.wait_for(check(), TIMEOUT_S))
+
+
+def test_own_workers_are_capped_failures_come_through_and_cancelled_tasks_go(
+    tmp_path: Path,
+) -> None:
+    async def check() -> None:
+        engine = Engine(1, tmp_path)
+        engine.start()
+        try:
+            assert set((await engine.run(_environment_of_worker)).values()) == {"1"}
+            with pytest.raises(ValueError, match="on purpose"):
+                await engine.run(_fail)
+            many = [asyncio.create_task(engine.run(double_slowly, n)) for n in range(200)]
+            await asyncio.sleep(0.3)
+            for task in many:
+                task.cancel()
+            await asyncio.gather(*many, return_exceptions=True)
+            start_s = time.monotonic()
+            assert await engine.run(double_slowly, 4) == 8
+            assert time.monotonic() - start_s < 3.0
+        finally:
+            await engine.stop()
+        assert engine.workers == 0
+
+    asyncio.run(asyncio.wait_for(check(), TIMEOUT_S))
