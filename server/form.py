@@ -94,8 +94,10 @@ class Section:
 
 def _number(value: float) -> str:
     if value == int(value) and abs(value) <= 1e5:
-        return str(int(value))
-    return f"{value:g}".replace("e+0", "e").replace("e+", "e").replace("e-0", "e-")
+        return str(int(value)).replace("-", "−")
+    return (
+        f"{value:g}".replace("e+0", "e").replace("e+", "e").replace("e-0", "e-").replace("-", "−")
+    )
 
 
 def _choice_label(value: str) -> str:

@@ -2,9 +2,11 @@
 
 import json
 import re
+import signal
 from pathlib import Path
 
 import h5py
+import httpx
 import numpy as np
 import pytest
 from playwright.sync_api import BrowserContext, Page, expect
@@ -248,3 +250,43 @@ def test_a_study_file_goes_out_and_comes_in_again(page: Page, done: str, tmp_pat
     page.wait_for_selector("[data-run]:not([disabled])")
     page.locator("[data-run]").click()
     page.wait_for_url(f"**/runs/{done}*")
+
+
+def test_the_curve_over_power_and_distance_at_once(page: Page, lab: LiveServer, done: str) -> None:
+    page.goto(f"/runs/{done}")
+    wait_for_state(page, "Done")
+    page.locator("[data-overview] > summary").click()
+    page.locator('[data-plot="overview"]').scroll_into_view_if_needed()
+    values = [lab.get(f"/api/runs/{done}/points/0/{p}")["distance"]["value"] for p in range(2)]
+    until(
+        page,
+        """(values) => {
+            const z = document.querySelector('[data-plot="overview"]').data?.[0]?.z;
+            return z && values.every((row, x) => row.every((value, y) => z[y][x] === value));
+        }""",
+        values,
+    )
+
+
+def test_a_page_survives_the_server_being_killed_and_started_again(
+    context: BrowserContext, watch: Watch, own_server: LiveServer
+) -> None:
+    watch.expect("net::ERR_")
+    own_server.start()
+    page = context.new_page()
+    run_id = own_server.post(lengthy(203))
+    page.goto(f"{own_server.url}/runs/{run_id}")
+    wait_for_values(page, "dip", "coupled", 1)
+    port = own_server.url.rpartition(":")[2]
+    own_server.signal(signal.SIGKILL)
+    expect(page.locator("[data-broken]")).to_be_visible()
+    own_server.stop()
+    own_server.client = httpx.Client(timeout=30.0)
+    own_server.start("--port", port)
+    expect(page.locator("[data-broken]")).to_be_hidden(timeout=30_000)
+    own_server.wait(run_id, "running")
+    before = page.locator("[data-status-text]").inner_text()
+    expect(page.locator("[data-status-text]")).not_to_have_text(before)
+    wait_for_state(page, "Running")
+    page.locator("[data-cancel]").click()
+    wait_for_state(page, "Cancelled")

@@ -6,7 +6,7 @@ import pytest
 from axe_playwright_python.sync_playwright import Axe
 from playwright.sync_api import Browser, Page, expect
 
-from tests.browser.watching import wait_for_state, wait_for_values
+from tests.browser.watching import curves, wait_for_state, wait_for_values
 from tests.serving import LiveServer
 
 
@@ -110,6 +110,10 @@ def test_paper_gets_the_results_and_not_the_form(page: Page, done: str) -> None:
     expect(page.locator("[data-study]")).to_be_hidden()
     expect(page.locator(".run-tools")).to_be_hidden()
     expect(page.locator('[data-plot="dip"]')).to_be_visible()
+    page.emulate_media(media="screen", color_scheme="dark")
+    assert page.pdf(format="A4").startswith(b"%PDF")
+    assert "coupled" in curves(page, "durations")
+    expect(page.locator("html")).to_have_attribute("data-theme", "auto")
 
 
 def test_a_page_is_usable_within_a_second_on_a_warm_cache(

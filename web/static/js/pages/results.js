@@ -29,12 +29,18 @@ export class Results {
     this.maps = [0, 1, 2].map((plane) => new EvolutionPlot(box(`map-${plane}`), plane, readout));
     for (const map of this.maps) map.zoomed = (change) => this.#zoomTogether(map, change);
     this.plots = { dip: new Surface(box("dip"), { intervalMs: 300 }) };
-    for (const key of ["cross", "auto", "spectra", "distance", "contrast", "durations"]) {
+    for (const key of ["cross", "auto", "spectra", "distance", "contrast", "durations", "overview"]) {
       this.plots[key] = new Surface(box(key), { intervalMs: 500 });
     }
     this.legend = new Legend(find(root, "legend"), () => this.#comparisonChanged());
     this.selection = new Selection(root, () => this.#selectionChanged());
     powerUnit.addEventListener("change", () => this.#run && this.#drawAll());
+    this.overview = find(root, "overview");
+    this.overview.addEventListener("toggle", () => {
+      if (!this.#run) return;
+      this.#wantDetails();
+      this.#drawOverview();
+    });
     const whole = find(root, "whole-window");
     whole.addEventListener("change", () => this.#run && this.#frameMaps());
     for (const button of findAll(root, "save")) {
@@ -101,11 +107,13 @@ export class Results {
       return;
     }
     this.#drawPoint();
+    this.#drawOverview();
     if (!this.selection.atEnd) this.#drawDip();
   }
 
   #selectionChanged() {
     this.#drawDip();
+    this.#drawOverview();
     this.#drawMaps();
     this.#drawPoint();
     this.#wantDetails();
@@ -121,6 +129,7 @@ export class Results {
 
   #drawAll() {
     this.selection.relabel(this.sweep);
+    this.#drawOverview();
     this.#drawDip();
     this.#drawMaps();
     this.#drawPoint();
@@ -136,10 +145,9 @@ export class Results {
     const { variant, point, atEnd } = this.selection;
     const variants = [...new Set([variant, ...this.#shownVariants()])];
     const wanted = variants.map((one) => [one, point]);
-    if (!atEnd) {
-      for (const one of variants) {
-        for (let i = 0; i < this.sweep.values.length; i += 1) if (i !== point) wanted.push([one, i]);
-      }
+    const everywhere = atEnd ? (this.overview.open ? [variant] : []) : variants;
+    for (const one of everywhere) {
+      for (let i = 0; i < this.sweep.values.length; i += 1) if (i !== point) wanted.push([one, i]);
     }
     this.#details.want(wanted);
   }
@@ -221,6 +229,15 @@ export class Results {
     fillReadout(find(this.root, "readout"), this.#shownVariants().map((index) => ({
       name: this.#run.variants[index].name, detail: this.#run.detail(index, point),
     })));
+  }
+
+  #drawOverview() {
+    if (!this.overview.open) return;
+    const { variant } = this.selection;
+    const { sweep } = this;
+    this.#note("overview", this.#run.variants[variant].name);
+    const rows = sweep.values.map((_, i) => this.#run.detail(variant, i)?.distance.value);
+    this.plots.overview.draw(() => figures.overviewFigure(this.#run.axes, sweep, rows));
   }
 
   #note(panel, text) {

@@ -1,6 +1,6 @@
 // The plots of one sweep point: correlations, spectra, distance, contrast, domain durations.
 
-import { componentColours, variantColour, variantMarker } from "../model/colour.js";
+import { componentColours, CONTRAST_MAP, scaleOf, variantColour, variantMarker } from "../model/colour.js";
 import { axis } from "./surface.js";
 import { theme, token } from "./theme.js";
 
@@ -130,6 +130,25 @@ export function distanceFigure(axes, shown, markKm) {
         type: "line", x0: markKm, x1: markKm, yref: "paper", y0: 0, y1: 1, layer: "below",
         line: { color: token("--cursor"), width: 1, dash: "dot" },
       }],
+    },
+  };
+}
+
+/** C12(0) over both at once; rows: for each sweep point its values along the line, or null. */
+export function overviewFigure(axes, sweep, rows) {
+  const z = axes.distance_km.map((_, i) => rows.map((row) => row?.[i] ?? null));
+  const most = Math.max(0.1, ...z.flat().map((value) => Math.abs(value ?? 0)));
+  return {
+    traces: [{
+      type: "heatmap", x: sweep.values, y: axes.distance_km, z,
+      zmin: -most, zmax: most, colorscale: scaleOf(CONTRAST_MAP), hoverongaps: false,
+      colorbar: { title: { text: "C12(0)", side: "right" }, thickness: 12, outlinewidth: 0 },
+      hovertemplate: "%{x:.4g}, %{y:.4g} km: %{z:.4f}<extra></extra>",
+    }],
+    layout: {
+      xaxis: axis(sweep.title, { type: sweep.logarithmic ? "log" : "linear", showgrid: false }),
+      yaxis: axis("Distance (km)", { showgrid: false, zeroline: false }),
+      plot_bgcolor: token("--unwritten"),
     },
   };
 }

@@ -112,6 +112,8 @@ export class Surface {
       const library = await plotly();
       await this.#react(library, width, height);
       if (first) for (const act of this.afterFirst) act(library);
+    } catch (failure) {
+      this.element.textContent = failure.message;
     } finally {
       this.#last = performance.now();
       this.#cost = first ? 0 : this.#last - begun;
