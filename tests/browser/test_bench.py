@@ -171,6 +171,23 @@ def test_the_map_tells_what_is_under_the_pointer(page: Page, lab: LiveServer, do
     counts = np.frombuffer(body.content, np.uint8).reshape(shape)
     column = np.abs(np.array(axes["time_ps"]) - float(found[1])).argmin()
     row = np.abs(np.array(axes["distance_km"]) - float(found[2])).argmin()
+    painted, table = page.evaluate(
+        """async ([row, column]) => {
+            const script = document.querySelector('script[type="module"]').src;
+            const { CONTRAST_MAP } = await import(new URL("../model/colour.js", script).href);
+            const image = new Image();
+            image.src = document.querySelector('[data-plot="map-0"]').layout.images[0].source;
+            await image.decode();
+            const canvas = document.createElement("canvas");
+            [canvas.width, canvas.height] = [image.width, image.height];
+            const pen = canvas.getContext("2d");
+            pen.drawImage(image, 0, 0);
+            const { data } = pen.getImageData(column, image.height - 1 - row, 1, 1);
+            return [Array.from(data.slice(0, 3)), CONTRAST_MAP];
+        }""",
+        [int(row), int(column)],
+    )
+    assert painted == table[counts[0, row, column]]
     told = float(found[3].replace("−", "-"))
     assert told == pytest.approx(2.0 * counts[0, row, column] / 255.0 - 1.0, abs=0.006)
 

@@ -2,10 +2,12 @@
 
 from typing import Any
 
+import numpy as np
 import pytest
 from axe_playwright_python.sync_playwright import Axe
 from playwright.sync_api import Browser, Page, expect
 
+from tests.browser.vision import EYES, least_distance, oklab
 from tests.browser.watching import curves, wait_for_state, wait_for_values
 from tests.serving import LiveServer
 
@@ -52,45 +54,51 @@ def test_the_first_screen_of_a_run_shows_run_map_and_curve(page: Page, done: str
         assert box["y"] + box["height"] <= 900
 
 
-def test_curves_and_maps_keep_their_promises_about_colour(page: Page) -> None:
+@pytest.fixture
+def colours(page: Page) -> Any:
+    """The page's colours: of variants for each theme, with their contrasts, and of the maps."""
     page.goto("/")
-    colours: Any = page.evaluate(
+    return page.evaluate(
         """async () => {
             const script = document.querySelector('script[type="module"]').src;
             const it = await import(new URL("../model/colour.js", script).href);
             const grounds = { light: [255, 255, 255], dark: [0x15, 0x1c, 0x1e] };
-            const ratio = (theme, i) => it.contrastRatio(it.variantBytes(theme, i), grounds[theme]);
-            const contrasts = Object.keys(grounds).flatMap((theme) =>
-                Array.from({ length: 8 }, (_, i) => ratio(theme, i)));
-            const pairs = Array.from({ length: 24 }, (_, i) =>
+            const variants = {};
+            const ratios = [];
+            for (const [theme, ground] of Object.entries(grounds)) {
+                variants[theme] = Array.from({ length: 8 }, (_, i) => it.variantBytes(theme, i));
+                ratios.push(...variants[theme].map((colour) => it.contrastRatio(colour, ground)));
+            }
+            const marks = Array.from({ length: 24 }, (_, i) =>
                 `${it.variantColour("light", i)} ${it.variantMarker(i)}`);
-            return { contrasts, pairs, contrast: it.CONTRAST_MAP, intensity: it.INTENSITY_MAPS };
+            const maps = { contrast: it.CONTRAST_MAP, intensity: it.INTENSITY_MAPS };
+            return { variants, ratios, marks, ...maps };
         }"""
     )
-    assert min(colours["contrasts"]) >= 3.0
-    assert len(set(colours["pairs"])) == 24
+
+
+def test_every_variant_stands_out_from_the_ground_and_from_the_others(colours: Any) -> None:
+    assert min(colours["ratios"]) >= 3.0
+    assert len(set(colours["marks"])) == 24
+
+
+@pytest.mark.parametrize("eye", list(EYES))
+@pytest.mark.parametrize("theme", ["light", "dark"])
+def test_colour_blind_eyes_tell_the_variants_apart(colours: Any, theme: str, eye: str) -> None:
+    variants = colours["variants"][theme]
+    assert least_distance(variants[:4], eye) > 0.18
+    assert least_distance(variants, eye) > 0.08
+
+
+def test_maps_are_even_in_lightness_and_neutral_in_the_middle(colours: Any) -> None:
     for table in colours["intensity"]:
-        steps = [
-            _lightness(b) - _lightness(a) for a, b in zip(table[::8], table[8::8], strict=False)
-        ]
-        assert min(steps) > 0.0
-        assert max(steps) < 1.5 * min(steps)
-    signed = [_lightness(colour) for colour in colours["contrast"]]
-    assert max(abs(a - b) for a, b in zip(signed, signed[::-1], strict=True)) < 0.02
-    middle = colours["contrast"][128]
-    assert max(middle) - min(middle) < 12
-
-
-def _lightness(colour: list[int]) -> float:
-    """OKLab lightness of an sRGB colour in bytes (Ottosson 2020)."""
-    linear = [x / 255 / 12.92 if x <= 10 else ((x / 255 + 0.055) / 1.055) ** 2.4 for x in colour]
-    rows = (
-        (0.4122214708, 0.5363325363, 0.0514459929),
-        (0.2119034982, 0.6806995451, 0.1073969566),
-        (0.0883024619, 0.2817188376, 0.6299787005),
-    )
-    cones = [sum(a * b for a, b in zip(row, linear, strict=True)) ** (1 / 3) for row in rows]
-    return 0.2104542553 * cones[0] + 0.7936177850 * cones[1] - 0.0040720468 * cones[2]
+        steps = np.diff(oklab(table)[::8, 0])
+        assert steps.min() > 0.0
+        assert steps.max() < 1.5 * steps.min()
+    contrast = oklab(colours["contrast"])
+    assert np.abs(contrast[:, 0] - contrast[::-1, 0]).max() < 0.02
+    assert np.abs(np.diff(contrast[:, 0], 2)).max() < 0.012
+    assert np.linalg.norm(contrast[127:129, 1:], axis=1).max() < 0.01
 
 
 def test_the_theme_chosen_stays_chosen(page: Page) -> None:
