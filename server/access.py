@@ -8,8 +8,9 @@ from a page of this server (Origin and Sec-Fetch-Site).
 On any other address a key is needed as well: one that may write, one that may only look. Keys
 are kept as salted scrypt hashes. A key is shown once, in a link; the browser then holds a random
 cookie, of which the server keeps the SHA-256. Cookies are HttpOnly and SameSite=Strict, so no
-script reads them and no other site sends them. Wrong keys are counted and slowed down. Traffic is
-not encrypted: on a network that is not trusted, put a TLS proxy in front.
+script reads them, no other site sends them, and a rebound name has none. Wrong keys are counted
+and slowed down. Traffic is not encrypted: on a network that is not trusted, put a TLS proxy in
+front.
 """
 
 import asyncio
@@ -117,6 +118,7 @@ class Gate:
     def __init__(self, app: ASGIApp, settings: Settings, storage: Storage) -> None:
         self._app = app
         self._loopback = settings.loopback
+        self._names = LOCAL_NAMES | {settings.host}
         self._storage = storage
         self._attempts = Attempts()
         self._hashing = asyncio.Lock()
@@ -137,7 +139,7 @@ class Gate:
     def _check_sender(self, request: Request) -> None:
         headers = request.headers
         host = headers.get("host", "")
-        if self._loopback and _name_of(host) not in LOCAL_NAMES:
+        if self._loopback and _name_of(host) not in self._names:
             raise Forbidden(
                 "this server answers to localhost and 127.0.0.1 only: open it under one of these"
             )

@@ -1,6 +1,7 @@
 """The application: everything put together."""
 
 import logging
+import sqlite3
 from collections.abc import AsyncIterator
 from contextlib import asynccontextmanager
 from functools import partial
@@ -13,7 +14,7 @@ from starlette.middleware.gzip import GZipMiddleware
 
 from server.access import Gate
 from server.engine import Engine
-from server.errors import ServerError, error_response
+from server.errors import DiskFull, ServerError, error_response
 from server.lifecycle import IllegalTransition
 from server.middleware import SECURITY_HEADERS, BodyLimit, SecurityHeaders
 from server.routes import overlay, pages, runs, sessions, system
@@ -24,6 +25,7 @@ from server.settings import Settings
 from server.storage import Storage
 from server.stream import Board
 from server.validation import first_problem
+from server.wording import is_full_disk
 from solver.experiment import Study
 from solver.study import prepare
 
@@ -97,6 +99,14 @@ def _handle_errors(app: FastAPI) -> None:
         conflict = ServerError(str(error))
         conflict.status, conflict.code = 409, "conflict"
         return error_response(conflict)
+
+    @app.exception_handler(sqlite3.OperationalError)
+    async def unwritable(request: Request, error: sqlite3.OperationalError) -> JSONResponse:
+        if not is_full_disk(error):
+            raise error
+        return error_response(
+            DiskFull("the disk that holds the data folder is full: free some space, then try again")
+        )
 
     @app.exception_handler(RequestValidationError)
     async def invalid(request: Request, error: RequestValidationError) -> JSONResponse:

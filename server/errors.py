@@ -78,6 +78,13 @@ class TooLarge(ServerError):
     code = "too_large"
 
 
+class DiskFull(ServerError):
+    """The disk of the data folder has no room."""
+
+    status = 507
+    code = "disk_full"
+
+
 class SettingsError(Exception):
     """The server cannot start as told; one line that says what to change."""
 

@@ -2,7 +2,9 @@
 
 import asyncio
 import logging
-from collections import OrderedDict, deque
+import sqlite3
+from collections import deque
+from collections.abc import Coroutine
 from dataclasses import dataclass, field
 from functools import partial
 from pathlib import Path
@@ -10,7 +12,7 @@ from typing import Any
 
 from pydantic import ValidationError
 
-from server.checkpoints import Checkpoints
+from server.archive import Archive
 from server.engine import Engine
 from server.errors import Conflict, NotFound
 from server.execution import Execution, News
@@ -22,12 +24,12 @@ from server.storage import Counters, RunRecord, Storage, undo_until
 from server.stream import Board, EventLog, RunFeed, Throttle
 from server.wording import explain, title_of
 from solver.experiment import Study
-from solver.result import PointResult, StudyResult, read_result, write_result
+from solver.result import PointResult, StudyResult
 from solver.study import StudyState
 
 _log = logging.getLogger("crossdip.runs")
-_OPENED_KEPT = 3
 _LIBRARY_INTERVAL_S = 0.5
+_RETRY_INTERVAL_S = 1.0
 
 
 @dataclass
@@ -54,18 +56,20 @@ class Runs:
         self._storage = storage
         self._engine = engine
         self._board = board
-        self._settings = settings
+        self._archive = Archive(settings)
         self._queue: deque[str] = deque()
         self._queued = asyncio.Event()
         self._live: dict[str, LiveRun] = {}
-        self._opened: OrderedDict[tuple[str, str], StudyResult] = OrderedDict()
         self._opening = asyncio.Lock()
         self._worker: asyncio.Task[None] | None = None
+        self._beside: set[asyncio.Task[Any]] = set()
         self.realizations_done = 0
 
     async def open(self) -> None:
         """Sweep the folder, queue again what a stop interrupted, and begin."""
-        await asyncio.to_thread(self._sweep)
+        await asyncio.to_thread(self._storage.purge)
+        known = await asyncio.to_thread(self._storage.run_ids)
+        await asyncio.to_thread(self._archive.sweep, known)
         for record in await asyncio.to_thread(self._storage.unfinished):
             await asyncio.to_thread(self._storage.step, record.id, "interrupt")
             self._queue.append(record.id)
@@ -74,9 +78,10 @@ class Runs:
 
     async def close(self) -> None:
         """Stop; the run under way keeps its checkpoints and is taken up at the next start."""
-        if self._worker is not None:
-            self._worker.cancel()
-            await asyncio.gather(self._worker, return_exceptions=True)
+        ending = [*self._beside, *([self._worker] if self._worker else [])]
+        for task in ending:
+            task.cancel()
+        await asyncio.gather(*ending, return_exceptions=True)
 
     async def submit(self, study: Study) -> tuple[RunRow, bool]:
         """The run of a study and whether it is new; an ended one is queued again."""
@@ -175,14 +180,12 @@ class Runs:
             result = await live.execution.ask(StudyState.result)
             if result is not None:
                 return record, result
-        key = (record.id, record.state + record.updated)
         async with self._opening:
-            if key not in self._opened:
-                self._opened[key] = await asyncio.to_thread(self._read, record)
-                while len(self._opened) > _OPENED_KEPT:
-                    self._opened.popitem(last=False)
-            self._opened.move_to_end(key)
-            return record, self._opened[key]
+            result = self._archive.kept(record)
+            if result is None:
+                result = await asyncio.to_thread(self._archive.read, record)
+            self._archive.keep(record, result)
+            return record, result
 
     async def open_point(self, run_id: str, variant: int, point: int) -> PointResult:
         """All that is known of one point now; raises NotFound when that is nothing."""
@@ -217,7 +220,7 @@ class Runs:
     async def result_path(self, run_id: str) -> tuple[RunRecord, Path]:
         """The result file; raises Conflict while the run is not done."""
         record = await self._record(run_id)
-        path = self._path(run_id)
+        path = self._archive.path(run_id)
         if record.state != "done":
             raise Conflict(f"the run is {record.state}: its result file is written when it is done")
         if not path.exists():
@@ -250,9 +253,10 @@ class Runs:
             run_id = self._queue.popleft()
             try:
                 await self._conduct(run_id)
-            except Exception:
+            except Exception as error:
                 # One run must never take the queue down with it.
                 _log.exception("run %s could not be carried out", run_id)
+                self._aside(self._fail_late(run_id, explain(error)))
 
     async def _conduct(self, run_id: str) -> None:
         record = await asyncio.to_thread(self._storage.run, run_id)
@@ -267,7 +271,7 @@ class Runs:
                 run_id, "fail", "An earlier version made this run: press Run to compute it afresh."
             )
             return
-        checkpoints = self._checkpoints(run_id)
+        checkpoints = self._archive.checkpoints(run_id)
         live = LiveRun(
             Execution(study, self._engine, partial(self._hear, run_id), checkpoints),
             RunFeed(self._board.log(run_id)),
@@ -281,8 +285,11 @@ class Runs:
             if live.task.cancelled():
                 return
             live.feed.flush()
-            await self._save(record, live.task.result())
+            # The title may have changed since the run began.
+            record = await self._record(run_id, deleted=True)
+            await asyncio.to_thread(self._archive.write, record, live.task.result())
             await self._step(run_id, "finish", "", await self._counters(run_id))
+            self._archive.keep(await self._record(run_id, deleted=True), live.task.result())
             await asyncio.to_thread(checkpoints.remove)
         except IllegalTransition:
             # Cancelled between two steps: the table has had its say.
@@ -297,14 +304,6 @@ class Runs:
             live.feed.flush()
             self._live.pop(run_id, None)
             live.execution.close()
-
-    async def _save(self, record: RunRecord, result: StudyResult) -> None:
-        current = await asyncio.to_thread(self._storage.run, record.id)
-        title = current.title if current is not None else record.title
-        path = self._path(record.id)
-        path.parent.mkdir(parents=True, exist_ok=True)
-        write = partial(write_result, path, result, title=title, created=record.created)
-        await asyncio.to_thread(write)
 
     def _hear(self, run_id: str, news: News) -> None:
         live = self._live.get(run_id)
@@ -355,8 +354,27 @@ class Runs:
         return row
 
     def _announce_live(self, run_id: str) -> None:
-        task = asyncio.create_task(self._announce(run_id))
-        task.add_done_callback(lambda done: done.cancelled() or done.exception())
+        self._aside(self._announce(run_id))
+
+    async def _fail_late(self, run_id: str, message: str) -> None:
+        """Record a failure that could not be recorded at once, as on a disk that was full."""
+        self._board.log(run_id).publish("state", {"state": "failed", "message": message})
+        self._board.finish(run_id)
+        while True:
+            try:
+                await self._step(run_id, "fail", message)
+            except sqlite3.Error:
+                await asyncio.sleep(_RETRY_INTERVAL_S)
+            except IllegalTransition:
+                return
+            else:
+                return
+
+    def _aside(self, work: Coroutine[Any, Any, Any]) -> None:
+        """Do something beside, until it is done or the server stops."""
+        task = asyncio.create_task(work)
+        self._beside.add(task)
+        task.add_done_callback(self._beside.discard)
 
     async def _enqueue(self, run_id: str) -> None:
         if run_id not in self._queue:
@@ -369,36 +387,3 @@ class Runs:
         if record is None or (record.deleted is not None and not deleted):
             raise NotFound(f"there is no run {run_id}: look for it in the Library")
         return record
-
-    def _read(self, record: RunRecord) -> StudyResult:
-        path = self._path(record.id)
-        if record.state == "done":
-            try:
-                return read_result(path)
-            except (OSError, ValueError, KeyError) as error:
-                raise NotFound(
-                    "the result file is missing or damaged: delete the run and run it again"
-                ) from error
-        state = StudyState(Study.model_validate_json(record.study))
-        for variant, point, arrays in self._checkpoints(record.id).load():
-            state.restore(variant, point, arrays)
-        return state.result()
-
-    def _path(self, run_id: str) -> Path:
-        return self._settings.results / f"{run_id}.h5"
-
-    def _checkpoints(self, run_id: str) -> Checkpoints:
-        return Checkpoints(self._settings.checkpoints / run_id)
-
-    def _sweep(self) -> None:
-        """Remove what a crash or a final deletion left behind."""
-        self._storage.purge()
-        known = self._storage.run_ids()
-        self._settings.results.mkdir(parents=True, exist_ok=True)
-        self._settings.checkpoints.mkdir(parents=True, exist_ok=True)
-        for path in self._settings.results.iterdir():
-            if path.suffix != ".h5" or path.stem not in known:
-                path.unlink()
-        for folder in self._settings.checkpoints.iterdir():
-            if folder.name not in known:
-                Checkpoints(folder).remove()

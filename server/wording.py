@@ -2,6 +2,7 @@
 
 import errno
 import os
+import sqlite3
 
 from server.errors import ServerError
 from solver.experiment import Study, numeric_parameters
@@ -18,13 +19,16 @@ def title_of(study: Study) -> str:
     return f"{title} {span}: {curves}"[:200]
 
 
+def is_full_disk(error: Exception) -> bool:
+    """True when the disk had no room; HDF5 and SQLite say so in words only."""
+    if isinstance(error, OSError):
+        return error.errno in _FULL_DISK or os.strerror(errno.ENOSPC) in str(error)
+    return isinstance(error, sqlite3.OperationalError) and "full" in str(error)
+
+
 def explain(error: Exception) -> str:
     """What a person can do about a failed run."""
-    # HDF5 tells of a full disk in words only.
-    full = isinstance(error, OSError) and (
-        error.errno in _FULL_DISK or os.strerror(errno.ENOSPC) in str(error)
-    )
-    if full:
+    if is_full_disk(error):
         return (
             "The disk that holds the data folder is full. Free some space, then press Continue: "
             "everything computed so far is kept."

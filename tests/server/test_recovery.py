@@ -1,5 +1,6 @@
 """What may go wrong while a run is under way: nothing is lost, nothing is half-written."""
 
+import contextlib
 import os
 import shutil
 import signal
@@ -126,6 +127,13 @@ def _kill_and_leave_debris(server: LiveServer, run_id: str) -> None:
     (server.data / "results" / ("0" * 16 + ".h5")).write_bytes(b"no row")
 
 
+def fill(path: Path) -> None:
+    """Write until not one more byte fits."""
+    with path.open("wb", buffering=0) as file, contextlib.suppress(OSError):
+        while file.write(bytes(65_536)):
+            pass
+
+
 @pytest.fixture
 def small_disk(tmp_path: Path) -> Iterator[Path]:
     """A file system of two megabytes."""
@@ -148,14 +156,16 @@ def test_a_full_disk_fails_the_run_with_advice_and_can_be_continued(small_disk: 
         filler = small_disk / "filler"
         run_id = server.post(enough(20))
         server.wait_for_progress(run_id, 32)
-        free = shutil.disk_usage(small_disk).free
-        filler.write_bytes(bytes(max(0, free - 4096)))
-        row = server.wait(run_id, "failed", "done")
-        assert row["state"] == "failed"
-        assert "Free some space, then press Continue" in row["message"]
+        fill(filler)
+        last = list(server.events(run_id))[-1]
+        assert last.data["state"] == "failed"
+        assert "Free some space, then press Continue" in last.data["message"]
+        refused = server.client.post("/api/sessions", json={"name": "x" * 100})
+        assert (refused.status_code, refused.json()["error"]["code"]) == (507, "disk_full")
         assert list((small_disk / "data" / "results").iterdir()) == []
         assert not list((small_disk / "data" / "checkpoints").rglob("*.new"))
         filler.unlink()
+        assert server.wait(run_id, "failed")["message"] == last.data["message"]
         subprocess.run(["mount", "-o", "remount,size=64m", str(small_disk)], check=True)
         server.client.post(f"/api/runs/{run_id}/resume")
         assert server.wait(run_id, "done", "failed")["state"] == "done"
