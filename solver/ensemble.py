@@ -70,8 +70,9 @@ class Bench:
         return synthesize(noise, self.response)
 
     def expected_steps(self) -> int:
-        """Steps that should meet the tolerance, judged from the launch alone."""
+        """Steps that should meet the tolerance, judged from the launch alone, within the limit."""
         expected = self.track.expected_steps(self.scheme, self.light, self.tolerance)
+        expected = min(expected, float(STEP_LIMIT))
         return sum(piece.steps for piece in self.pieces(np.ceil(expected)))
 
     def pieces(self, steps: float) -> list[Piece]:
@@ -143,6 +144,17 @@ def pilot(bench: Bench, fields: Field) -> Pilot:
     scheme, order = bench.scheme, bench.scheme.order
     steps, spent, doublings = float(bench.expected_steps() * bench.refinement), 0, 0
     while True:
+        if steps >= STEP_LIMIT:
+            return Pilot(
+                round(steps),
+                np.nan,
+                spent,
+                Outcome(
+                    "tolerance_not_met",
+                    "the steps needed are too many: loosen field_tolerance, or lower the power "
+                    "or the length",
+                ),
+            )
         runs = []
         outcome = COMPLETED
         for factor in (1.0, 2.0):
@@ -169,17 +181,6 @@ def pilot(bench: Bench, fields: Field) -> Pilot:
             return Pilot(coarse, shift * ratio / (ratio - 1.0), spent)
         growth = (1.2 * error / bench.tolerance) ** (1 / order)
         steps = coarse * min(max(growth, 1.2), 8.0)
-        if steps > STEP_LIMIT:
-            return Pilot(
-                fine,
-                np.nan,
-                spent,
-                Outcome(
-                    "tolerance_not_met",
-                    "the steps needed are too many: loosen field_tolerance, or lower the power "
-                    "or the length",
-                ),
-            )
 
 
 def run_round(task: RoundTask) -> RoundOutcome:

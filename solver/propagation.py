@@ -23,6 +23,8 @@ PATIENCE = 2
 """Times the steps are halved before a full band is put down to the light itself."""
 STEP_LIMIT = 400_000
 """Steps down one line past which a tolerance is given up."""
+BRIGHTEST_ROOT_W = 1e30
+"""Amplitude past which the powers of powers that choose the steps would overflow."""
 
 
 def scheme_for(tolerance: float) -> Scheme:
@@ -146,6 +148,8 @@ def _checked_field(field: Field) -> Field:
     field = field.astype(np.complex128)
     if not np.isfinite(field).all():
         raise ValueError("field must be finite: it holds NaN or infinity")
+    if np.abs(field).max() > BRIGHTEST_ROOT_W:
+        raise ValueError(f"field must stay within {BRIGHTEST_ROOT_W:g} √W")
     return field
 
 
@@ -195,6 +199,20 @@ def _propagate_batch(
 
     keep = bool(wanted)
     steps = track.expected_steps(scheme, light, tolerance)
+    if steps > STEP_LIMIT:
+        shortest = run(1, False)  # tells whether the arithmetic holds such a field at all
+        if shortest.outcome.kind == "non_finite":
+            return finish(shortest, math.nan, shortest.outcome)
+        return finish(
+            shortest,
+            math.nan,
+            Outcome(
+                "tolerance_not_met",
+                f"it would take about {steps:.1g} steps, more than the {STEP_LIMIT} allowed: "
+                "lower the power, shorten the line or loosen the tolerance",
+                0.0,
+            ),
+        )
     coarse = run(steps / 2, False)
     for _ in range(PATIENCE):
         if coarse.outcome.kind != "aliased":
