@@ -1,14 +1,12 @@
 """What applies to every request and response."""
 
-from collections.abc import MutableMapping
-from typing import Any
-
-from starlette.datastructures import Headers, MutableHeaders
+from starlette.datastructures import MutableHeaders
 from starlette.types import ASGIApp, Message, Receive, Scope, Send
 
 from server.errors import TooLarge, error_response
 
 BODY_LIMIT_BYTES = 1_048_576
+DRAIN_LIMIT_BYTES = 33_554_432
 
 SECURITY_HEADERS = {
     # The hash is that of an empty style element, which the plotting library inserts and then
@@ -59,17 +57,19 @@ class BodyLimit:
         if scope["type"] != "http" or scope["method"] in {"GET", "HEAD", "OPTIONS"}:
             await self._app(scope, receive, send)
             return
-        announced = Headers(scope=scope).get("content-length", "0")
-        body = b"" if announced.isdigit() and int(announced) <= BODY_LIMIT_BYTES else None
+        body: bytes | None = b""
+        taken_bytes = 0
         more = True
-        while body is not None and more:
-            message: MutableMapping[str, Any] = await receive()
+        # A body that is too large is still taken in and thrown away, up to a point: a client
+        # whose writing is cut off sees a broken connection in place of the answer.
+        while more and taken_bytes < DRAIN_LIMIT_BYTES:
+            message = await receive()
             if message["type"] != "http.request":
                 return
-            body += message.get("body", b"")
+            piece = message.get("body", b"")
+            taken_bytes += len(piece)
+            body = body + piece if body is not None and taken_bytes <= BODY_LIMIT_BYTES else None
             more = message.get("more_body", False)
-            if len(body) > BODY_LIMIT_BYTES:
-                body = None
         if body is None:
             error = TooLarge(
                 f"the body is larger than {BODY_LIMIT_BYTES // 1024} KiB: a study is far smaller"

@@ -123,7 +123,8 @@ class LiveServer:
 
     def read_line(self) -> str:
         """The next line of standard output."""
-        assert self._process is not None and self._process.stdout is not None
+        assert self._process is not None
+        assert self._process.stdout is not None
         return self._process.stdout.readline()
 
     def signal(self, number: signal.Signals) -> int:

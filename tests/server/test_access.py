@@ -21,7 +21,8 @@ def shared(tmp_path_factory: pytest.TempPathFactory) -> Iterator[tuple[LiveServe
     server = LiveServer(tmp_path_factory.mktemp("shared"), "--new-access-key", host="0.0.0.0")
     server.start()
     links = [re.search(r"enter\?key=(\S+)", server.read_line()) for _ in range(2)]
-    assert links[0] and links[1]
+    assert links[0]
+    assert links[1]
     yield server, links[0][1], links[1][1]
     server.stop()
 

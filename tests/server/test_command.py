@@ -35,7 +35,8 @@ def test_run_writes_what_the_server_would(
     assert ours.study == theirs.study
     for our_curve, their_curve in zip(ours.points, theirs.points, strict=True):
         for our_point, their_point in zip(our_curve, their_curve, strict=True):
-            assert our_point is not None and their_point is not None
+            assert our_point is not None
+            assert their_point is not None
             assert our_point.detail() == their_point.detail()
     assert sorted(path.name for path in tmp_path.iterdir()) == ["result.h5", "study.json"]
 

@@ -23,7 +23,7 @@ def test_flags_win_over_the_environment_and_that_over_defaults() -> None:
 
 @pytest.mark.parametrize("text", ["", "x", "-1", "70000", "1e3", "80.0"])
 def test_a_bad_number_names_its_flag_and_range(text: str) -> None:
-    with pytest.raises(SettingsError, match="--port .*CROSSDIP_PORT.* from 0 to 65535"):
+    with pytest.raises(SettingsError, match=r"--port .*CROSSDIP_PORT.* from 0 to 65535"):
         read_settings({"port": text}, {})
 
 
