@@ -5,6 +5,7 @@ import { api, identityIn, pages } from "../model/links.js";
 import { get, post } from "../model/requests.js";
 import { Run, TERMINAL } from "../model/run.js";
 import { sameStudy } from "../model/study.js";
+import { plotly } from "../plots/surface.js";
 import { find } from "./elements.js";
 import { StudyForm } from "./form.js";
 import { Results } from "./results.js";
@@ -188,4 +189,6 @@ setUpStudyFile();
 openAddress();
 openPage().then((mayWrite) => {
   runButton.disabled = !mayWrite;
+  // Parsing the plotting library takes a while: better before Run is pressed than after.
+  requestIdleCallback(() => plotly());
 });

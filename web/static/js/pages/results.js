@@ -129,10 +129,10 @@ export class Results {
 
   #drawAll() {
     this.selection.relabel(this.sweep);
-    this.#drawOverview();
-    this.#drawDip();
     this.#drawMaps();
+    this.#drawDip();
     this.#drawPoint();
+    this.#drawOverview();
     this.#wantDetails();
     this.#tables();
   }
@@ -216,15 +216,15 @@ export class Results {
     for (const key of ["cross", "distance", "contrast", "durations"]) this.#note(key, `at ${at}`);
     const summary = this.#run.summary(variant, point);
     const flagged = summary && summary.outcome !== "completed";
-    const blank = figures.blankFigure(flagged ? `flagged: ${summary.outcome.replaceAll("_", " ")}` : "not computed yet");
-    const { auto, spectra, cross, contrast, durations } = this.plots;
-    auto.draw(() => (own ? figures.autoFigure(axes, own) : blank));
-    spectra.draw(() => (own ? figures.spectraFigure(axes, own) : blank));
-    cross.draw(() => (shown.length ? figures.crossFigure(axes, shown) : blank));
-    contrast.draw(() => (shown.length ? figures.contrastFigure(axes, shown) : blank));
-    durations.draw(() => (shown.length ? figures.durationsFigure(axes, shown) : blank));
+    const instead = flagged ? `flagged: ${summary.outcome.replaceAll("_", " ")}` : "not computed yet";
+    const draw = (key, ready, make) => (ready ? this.plots[key].draw(make) : this.plots[key].clear(instead));
     const km = axes.distance_km[distance];
-    this.plots.distance.draw(() => (shown.length ? figures.distanceFigure(axes, shown, km) : blank));
+    draw("cross", shown.length, () => figures.crossFigure(axes, shown));
+    draw("auto", own, () => figures.autoFigure(axes, own));
+    draw("spectra", own, () => figures.spectraFigure(axes, own));
+    draw("distance", shown.length, () => figures.distanceFigure(axes, shown, km));
+    draw("contrast", shown.length, () => figures.contrastFigure(axes, shown));
+    draw("durations", shown.length, () => figures.durationsFigure(axes, shown));
     find(this.root, "readout-note").textContent = `at ${at}`;
     fillReadout(find(this.root, "readout"), this.#shownVariants().map((index) => ({
       name: this.#run.variants[index].name, detail: this.#run.detail(index, point),

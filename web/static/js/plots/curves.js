@@ -4,18 +4,6 @@ import { componentColours, CONTRAST_MAP, scaleOf, variantColour, variantMarker }
 import { axis } from "./surface.js";
 import { theme, token } from "./theme.js";
 
-/** A sentence where there is nothing to draw. */
-export function blankFigure(text) {
-  return {
-    traces: [],
-    layout: {
-      xaxis: { visible: false },
-      yaxis: { visible: false },
-      annotations: [{ text, showarrow: false, xref: "paper", yref: "paper", x: 0.5, y: 0.5 }],
-    },
-  };
-}
-
 const faded = (hex, alpha) =>
   `rgba(${[1, 3, 5].map((i) => parseInt(hex.slice(i, i + 2), 16)).join(",")},${alpha})`;
 

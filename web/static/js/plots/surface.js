@@ -80,6 +80,14 @@ export class Surface {
     this.#schedule();
   }
 
+  /** Show a sentence in place of a plot. */
+  clear(text) {
+    this.element.dataset.instead = text;
+    this.#pending = null;
+    if (this.#drawn) window.Plotly.purge(this.element);
+    this.#drawn = null;
+  }
+
   get ready() {
     return Boolean(this.#drawn);
   }
@@ -108,8 +116,10 @@ export class Surface {
     const begun = performance.now();
     this.#drawn = this.#pending;
     this.#pending = null;
+    delete this.element.dataset.instead;
     try {
       const library = await plotly();
+      if (!this.#drawn) return;
       await this.#react(library, width, height);
       if (first) for (const act of this.afterFirst) act(library);
     } catch (failure) {
