@@ -33,6 +33,12 @@ def band_energy(spectrum: Array, first: int, last: int) -> Real:
     return np.sum(np.abs(np.asarray(spectrum, np.complex128)[:, :, first:last]) ** 2, axis=(1, 2))
 
 
+def column_powers(field: Array, columns: int) -> Real:
+    """Mean power in equal parts of the window; shape (2, columns)."""
+    power = np.abs(np.asarray(field, dtype=np.complex128)) ** 2
+    return power.reshape(2, columns, -1).mean(axis=2)
+
+
 def intensity_moments(field: Array) -> Real:
     """Time means of I1, I2, I1², I2², I1·I2; shape (realizations, 5)."""
     i1, i2 = np.moveaxis(np.abs(np.asarray(field, dtype=np.complex128)) ** 2, 1, 0)

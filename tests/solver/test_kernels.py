@@ -3,7 +3,13 @@
 import numpy as np
 import pytest
 
-from solver.kernels import band_energy, intensity_moments, kerr_rotation, linear_flow
+from solver.kernels import (
+    band_energy,
+    column_powers,
+    intensity_moments,
+    kerr_rotation,
+    linear_flow,
+)
 from tests import reference
 
 PRECISIONS = [(np.complex64, np.float32), (np.complex128, np.float64)]
@@ -96,3 +102,12 @@ def test_intensity_moments(dtype: type, real: type) -> None:
     found = intensity_moments(field)
     assert found.dtype == np.float64
     np.testing.assert_allclose(found, reference.intensity_moments(field), rtol=1e-13)
+
+
+@pytest.mark.parametrize(("dtype", "real"), PRECISIONS)
+@pytest.mark.parametrize("columns", [1, 16, 256])
+def test_column_powers(dtype: type, real: type, columns: int) -> None:
+    """Accumulated in double precision whatever the field's."""
+    field = _fields(dtype, shape=(1, 2, 256))[0]
+    found = column_powers(field, columns)
+    np.testing.assert_allclose(found, reference.column_powers(field, columns), rtol=1e-13)
