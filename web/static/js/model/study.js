@@ -102,6 +102,7 @@ export function summaries(study, { powerUnit, label, parameters }) {
     dispersion === null
       ? `β2 ${brief(line[0].beta2_ps2_per_km)} ps²/km`
       : `D ${brief(dispersion)} ps/(nm·km)`;
+  const stepPs = ensemble.window_ps / ensemble.samples;
   const filter = receiver.filter === "none" ? "ideal" : `${brief(receiver.bandwidth_ghz)} GHz`;
   return {
     source: `${label(source.shape)}, ${brief(source.width_ghz)} GHz at ${brief(source.wavelength_nm)} nm`,
@@ -109,7 +110,7 @@ export function summaries(study, { powerUnit, label, parameters }) {
     launch: `${power(launch.total_power_mw, powerUnit)}, ${brief(100 * launch.share_1, 3)} % in 1`,
     line: `${spans}, ${brief(length)} km, ${fibre}`,
     receiver: receiver.extinction_db === null ? filter : `${filter}, ${brief(receiver.extinction_db)} dB`,
-    ensemble: `${ensemble.samples} × ${brief(ensemble.window_ps / ensemble.samples, 3)} ps, ±${brief(ensemble.standard_error_target)}`,
+    ensemble: `${ensemble.samples} × ${brief(stepPs, 3)} ps, ±${brief(ensemble.standard_error_target)}`,
     sweep: `${sweep.points} × ${swept?.title.toLowerCase() ?? sweep.parameter}, ${ends}`,
     variants: study.variants.map((variant) => variant.name).join(" · "),
   };

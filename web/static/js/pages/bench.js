@@ -85,7 +85,8 @@ async function openRun(id) {
     show(new Run(view));
   } catch (refusal) {
     show(null);
-    const text = refusal.status === 404 ? "There is no run at this address: it may have been deleted." : refusal.message;
+    const gone = "There is no run at this address: it may have been deleted.";
+    const text = refusal.status === 404 ? gone : refusal.message;
     toast(text, { fault: true, lasting: 60_000 });
   }
 }

@@ -168,7 +168,10 @@ export class StudyForm {
       const clip = (x) => Math.min(swept.high ?? x, Math.max(swept.low ?? x, x));
       const [start, stop] = [clip(present / 2), clip(present * 2)];
       Object.assign(sweep, { start, stop, spacing: "linear" });
-    } else Object.assign(sweep, { start: swept.low ?? 0, stop: Math.min(swept.high ?? 1, 1), spacing: "linear" });
+    } else {
+      const stop = Math.min(swept.high ?? 1, 1);
+      Object.assign(sweep, { start: swept.low ?? 0, stop, spacing: "linear" });
+    }
     this.#show();
   }
 

@@ -59,8 +59,9 @@ function draw() {
   const remarks = [];
   if (top) remarks.push(`Two parameters are swept: ${sweep.title} below, ${top.title} above.`);
   if (left.length) remarks.push(`Not drawn, as a third parameter is swept: ${left.join("; ")}.`);
-  const flagged = overlay.curves.flatMap(({ points }) => points).filter((one) => one && one.outcome !== "completed");
-  if (flagged.length) remarks.push(`${flagged.length} flagged points are marked at the foot, not drawn as values.`);
+  const every = overlay.curves.flatMap(({ points }) => points);
+  const flagged = every.filter((one) => one && one.outcome !== "completed").length;
+  if (flagged) remarks.push(`Flagged points are marked at the foot, not drawn as values: ${flagged}.`);
   say(part("remarks"), remarks.join(" "));
   showDifferences();
 }
@@ -78,7 +79,8 @@ function showDifferences() {
       ...values.map((value) => make("td", {}, valueText(value)))),
   );
   if (!rows.length) {
-    rows.push(make("tr", {}, make("td", { colspan: heads.length + 1 }, "Nothing: the curves answer the same question.")));
+    const text = "Nothing: the curves answer the same question.";
+    rows.push(make("tr", {}, make("td", { colspan: heads.length + 1 }, text)));
   }
   table.replaceChildren(
     make("thead", {}, make("tr", {}, make("th", { scope: "col" }, "Parameter"), ...heads)),

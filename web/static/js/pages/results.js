@@ -189,17 +189,20 @@ export class Results {
     const place = (this.selection.following && live) || this.#run.mapNear(variant, point);
     this.root.querySelector(".panel-maps").classList.toggle("no-map", !place);
     if (!place) {
-      note.textContent = this.#run.active ? "draws itself once its realization is under way" : "none is kept for this run";
+      const awaited = "draws itself once its realization is under way";
+      note.textContent = this.#run.active ? awaited : "none is kept for this run";
       return;
     }
-    const name = `one realization: ${this.#run.variants[place.variant].name} at ${this.sweep.text(place.point)}`;
+    const curve = this.#run.variants[place.variant].name;
+    const name = `one realization: ${curve} at ${this.sweep.text(place.point)}`;
     const same = place.variant === variant && place.point === point;
     note.textContent = same || live ? name : `${name}, the nearest that is kept`;
     const map = this.#run.map(place.variant, place.point);
     this.#mapShown = place;
     const km = this.selection.atEnd ? null : this.#run.axes.distance_km[this.selection.distance];
     for (const plot of this.maps) plot.show(map, this.#run.axes, km);
-    if (!map.complete && this.#run.summary(place.variant, place.point)?.has_map) this.#details.wantMap(place.variant, place.point);
+    const kept = this.#run.summary(place.variant, place.point)?.has_map;
+    if (kept && !map.complete) this.#details.wantMap(place.variant, place.point);
   }
 
   #drawPoint() {

@@ -28,8 +28,8 @@ async function load() {
     showRuns(session.runs);
     say(part("fault"), "");
   } catch (refusal) {
-    const text = refusal.status === 404 ? "There is no session at this address: it may have been deleted." : refusal.message;
-    say(part("fault"), text);
+    const gone = "There is no session at this address: it may have been deleted.";
+    say(part("fault"), refusal.status === 404 ? gone : refusal.message);
   }
 }
 

@@ -26,7 +26,9 @@ function entry(session) {
     make("a", { href: pages.session(session.id) }, session.name),
     make("span", { class: "note" }, `${count}, changed ${dateText(session.updated)}`),
     mayWrite
-      ? make("button", { type: "button", "aria-label": `Delete ${session.name}`, onclick: () => discard(session) }, "Delete")
+      ? make("button", {
+        type: "button", "aria-label": `Delete ${session.name}`, onclick: () => discard(session),
+      }, "Delete")
       : null,
   );
 }

@@ -76,10 +76,11 @@ export class Status {
       return counts + (left ? `, about ${left} left` : "");
     }
     if (state === "cancelled") {
-      return `At ${brief(100 * fraction, 3)} %: ${counts}. What was computed is kept; Continue goes on from it.`;
+      const kept = "What was computed is kept; Continue goes on from it.";
+      return `At ${brief(100 * fraction, 3)} %: ${counts}. ${kept}`;
     }
     if (state === "failed") {
-      return message || "The server could not finish this run. What was computed is kept; Continue goes on from it.";
+      return message || "The server could not finish this run. Continue goes on from what it had.";
     }
     return counts;
   }

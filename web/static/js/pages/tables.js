@@ -58,7 +58,8 @@ export function fillRemarks(box, run, sweep) {
   const { flagged, capped } = run.remarks();
   const name = ({ variant, point }) => `${run.variants[variant].name} at ${sweep.text(point)}`;
   const items = flagged.map((one) =>
-    make("li", { class: "flag" }, `${name(one)}: ${one.outcome.replaceAll("_", " ")}, not drawn as a value. ${sentence(one.advice)}`),
+    make("li", { class: "flag" },
+      `${name(one)}: ${one.outcome.replaceAll("_", " ")}, not drawn as a value. ${sentence(one.advice)}`),
   );
   if (capped.length) {
     const target = run.study.experiment.ensemble;

@@ -42,6 +42,12 @@ function correlationTraces(lag, curve, name, colour) {
   ];
 }
 
+/** A small key in the upper right corner, for curves that the page's legend does not name. */
+function corner() {
+  const key = { x: 1, xanchor: "right", y: 1, bgcolor: "rgba(0,0,0,0)", font: { size: 10 }, itemwidth: 30 };
+  return { showlegend: true, legend: key };
+}
+
 const lagAxis = () => axis("Lag τ (ps)", { zeroline: true });
 
 export function autoFigure(axes, detail) {
@@ -53,7 +59,7 @@ export function autoFigure(axes, detail) {
       ...correlationTraces(axes.lag_ps, auto1, "component 1", one),
       ...correlationTraces(axes.lag_ps, auto2, "component 2", two),
     ],
-    layout: { xaxis: lagAxis(), yaxis: axis("Autocorrelation", { zeroline: true }) },
+    layout: { xaxis: lagAxis(), yaxis: axis("Autocorrelation", { zeroline: true }), ...corner() },
   };
 }
 
@@ -92,6 +98,7 @@ export function spectraFigure(axes, detail) {
         zeroline: false,
         range: Number.isFinite(top) ? [top - RANGE_DB, top + 4] : undefined,
       }),
+      ...corner(),
     },
   };
 }
@@ -107,7 +114,9 @@ export function distanceFigure(axes, shown, markKm) {
         mode: "lines+markers",
         line: { color: colour, width: 1.6 },
         marker: { color: colour, size: 6, symbol: variantMarker(index) },
-        error_y: { type: "data", array: detail.distance.standard_error, color: colour, thickness: 1.6, width: 3 },
+        error_y: {
+          type: "data", array: detail.distance.standard_error, color: colour, thickness: 1.6, width: 3,
+        },
         hovertemplate: "%{x:.4g} km: %{y:.4f}<extra>%{fullData.name}</extra>",
       };
     }),
@@ -176,7 +185,9 @@ export function durationsFigure(axes, shown) {
         mode: "lines+markers",
         line: { color: colour, width: 1.4 },
         marker: { color: colour, size: 5, symbol: variantMarker(index) },
-        error_y: { type: "data", array: detail.durations.standard_error, color: colour, thickness: 1, width: 2 },
+        error_y: {
+          type: "data", array: detail.durations.standard_error, color: colour, thickness: 1, width: 2,
+        },
         hovertemplate: "%{x:.4g} ps: %{y:.2e} /ps<extra>%{fullData.name}</extra>",
       };
     }),

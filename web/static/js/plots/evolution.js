@@ -109,7 +109,8 @@ export class EvolutionPlot {
     const [t0, t1] = edges(times);
     const [z0, z1] = edges(distances);
     const limits = { range: this.#span ?? [t0, t1], minallowed: t0, maxallowed: t1 };
-    const bounds = this.plane === 0 ? [-1, 1] : [0, 255e3 * INTENSITY_CEILING * this.#map.scale || 1];
+    const ceilingMw = 255e3 * INTENSITY_CEILING * this.#map.scale || 1;
+    const bounds = this.plane === 0 ? [-1, 1] : [0, ceilingMw];
     this.scaleShown = this.#map.scale;
     const corners = {
       type: "heatmap", x: [t0, t1], y: [z0, z1], z: [[0, 0], [0, 0]],
@@ -131,7 +132,9 @@ export class EvolutionPlot {
       layout: {
         margin: { l: 50, r: 8, t: 10, b: 38 },
         xaxis: axis("Time (ps)", { ...limits, showgrid: false, zeroline: false }),
-        yaxis: axis("Distance (km)", { range: [distances[0], distances.at(-1)], nticks: 5, showgrid: false, zeroline: false }),
+        yaxis: axis("Distance (km)", {
+          range: [distances[0], distances.at(-1)], nticks: 5, showgrid: false, zeroline: false,
+        }),
         plot_bgcolor: token("--unwritten"),
         images: [{
           source: this.#canvas.toDataURL(), xref: "x", yref: "y", x: t0, y: z1,

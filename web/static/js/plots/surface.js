@@ -166,7 +166,8 @@ export class Surface {
     copy.paper_bgcolor = token("--panel");
     copy.margin = { ...copy.margin, r: 20, t: 24 };
     copy.legend = { orientation: "h", y: 1.02, yanchor: "bottom", x: 0, font: { size: 12 } };
-    await library.downloadImage({ data: traces, layout: copy }, { format: "svg", width: 900, height: 560, filename });
+    const file = { format: "svg", width: 900, height: 560, filename };
+    await library.downloadImage({ data: traces, layout: copy }, file);
   }
 
   /** Undo every zoom. */
