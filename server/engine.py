@@ -8,7 +8,6 @@ With an address it joins a scheduler anywhere instead, and comes back when that 
 import asyncio
 import concurrent.futures
 import contextlib
-import importlib
 import itertools
 import logging
 import os
@@ -152,7 +151,7 @@ class Engine:
         for name in _THREAD_CAPS:
             os.environ.setdefault(name, "1")
         # The import takes a third of a second: the page is served meanwhile.
-        distributed = await asyncio.to_thread(importlib.import_module, "distributed")
+        distributed = await asyncio.to_thread(_load)
         if self._address:
             self._client = await distributed.Client(
                 self._address, asynchronous=True, set_as_default=False, timeout=5
@@ -169,7 +168,8 @@ class Engine:
         self._ready.set()
 
     async def _local_cluster(self, distributed: Any) -> Any:
-        dask = importlib.import_module("dask")
+        import dask
+
         logging.getLogger("distributed").setLevel(logging.ERROR)
         dask.config.set(
             {
@@ -217,3 +217,9 @@ class Engine:
         client, self._client = self._client, None
         if client is not None:
             await client.close()
+
+
+def _load() -> Any:
+    import distributed
+
+    return distributed

@@ -66,8 +66,9 @@ def serve(flags: Mapping[str, object], environment: Mapping[str, str]) -> int:
             raise SettingsError(
                 f"the database in {settings.data} cannot be opened: {error}"
             ) from None
-        keys = establish_keys(settings, storage)
         with _listen(settings) as listening:
+            # After the port is ours: links that nobody can open must not end older ones.
+            keys = establish_keys(settings, storage)
             config = uvicorn.Config(
                 create_app(settings, storage),
                 log_level="warning",
@@ -105,6 +106,10 @@ def _listen(settings: Settings) -> socket.socket:
     try:
         family = socket.getaddrinfo(settings.host, settings.port, type=socket.SOCK_STREAM)[0][0]
         return socket.create_server((settings.host, settings.port), family=family, backlog=512)
+    except socket.gaierror:
+        raise SettingsError(
+            f"{settings.host} is not an address of this machine: give one of its own with --host"
+        ) from None
     except OSError as error:
         reason = os.strerror(error.errno) if error.errno and error.errno > 0 else error.strerror
         raise SettingsError(

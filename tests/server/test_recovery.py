@@ -180,6 +180,7 @@ def test_a_second_server_on_the_same_folder_or_port_says_so(
     for flags, words in (
         (["--data", str(server.data), "--port", "0"], "another Crossdip server uses"),
         (["--data", str(tmp_path), "--port", port], f"cannot listen on 127.0.0.1 port {port}"),
+        (["--data", str(tmp_path), "--host", "no.such.invalid"], "is not an address of this"),
         (["--data", "/proc/nothing"], "cannot be used"),
         (["--data", str(tmp_path), "--port", "high"], "--port"),
         (["--data", str(tmp_path), "--host", "0.0.0.0"], "--new-access-key"),
