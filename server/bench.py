@@ -22,6 +22,7 @@ from typing import Any
 
 import psutil
 
+from server.settings import usable_cores
 from solver.experiment import Study
 
 SAMPLING_S = 0.05
@@ -198,7 +199,7 @@ def _growth(workers: int) -> None:
 def main(arguments: list[str]) -> int:
     """Measure and print; exit status."""
     parser = argparse.ArgumentParser(prog="crossdip bench", description=__doc__)
-    parser.add_argument("--workers", type=int, default=len(os.sched_getaffinity(0)))
+    parser.add_argument("--workers", type=int, default=usable_cores())
     parser.add_argument("--repeat", type=int, default=2, help="headline runs (2)")
     parser.add_argument("--growth", action="store_true", help="also measure memory against length")
     given = parser.parse_args(arguments)

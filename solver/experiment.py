@@ -590,6 +590,12 @@ HEADLINE_VARIANTS = (
 )
 
 
+AXES_OF = frozenset(
+    f"ensemble.{name}" for name in ("window_ps", "samples", "distances", "max_lag_ps")
+)
+"""Parameters that fix the axes of a study's results, and so belong to all its variants."""
+
+
 class Study(Stage):
     """An experiment, the axis swept and the variants compared. A run is its study."""
 
@@ -612,6 +618,11 @@ class Study(Stage):
             raise Contradiction("variants", "two variants have the same name: rename one")
         ends = {self.sweep.start, self.sweep.stop}
         for index, variant in enumerate(self.variants):
+            for path in variant.changes.keys() & AXES_OF:
+                raise Contradiction(
+                    f"variants.{index}.changes",
+                    f"{path} sets an axis that all variants share: change it in the experiment",
+                )
             for value in ends:
                 try:
                     with_changes(self.experiment, {**variant.changes, self.sweep.parameter: value})

@@ -68,6 +68,7 @@ class PointResult:
     steps: int = 0
     transforms: int = 0
     refinement: int = 1
+    length_km: float = 0.0
     estimates: Mapping[str, Estimate] = field(default_factory=dict)
     linear: LinearRegime | None = None
     picture: Picture | None = None
@@ -97,6 +98,7 @@ class PointResult:
             "advice": self.advice,
             "final": self.final,
             "has_map": self.picture is not None,
+            "length_km": self.length_km,
         }
 
     def detail(self) -> dict[str, Any]:
@@ -159,7 +161,11 @@ def _single(estimate: Estimate) -> dict[str, float | None]:
 
 @dataclass(frozen=True)
 class Axes:
-    """Axes of every estimate of a study."""
+    """Axes of every estimate of a study.
+
+    Distances are those of the experiment as given; a point with a line of another length has
+    the same parts of its own ``length_km``.
+    """
 
     study: Study
 
@@ -272,6 +278,7 @@ _SCALARS = (
     "steps",
     "transforms",
     "refinement",
+    "length_km",
 )
 
 

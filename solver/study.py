@@ -192,6 +192,7 @@ class Chain:
                 steps=self.findings.steps if self.findings else 0,
                 transforms=self.transforms,
                 refinement=self.refinement,
+                length_km=self.experiment.length_km,
                 estimates=(
                     Estimators(self.layout, self.blocks, self.means) if self.findings else {}
                 ),
@@ -272,6 +273,7 @@ class StudyState:
     def __init__(self, study: Study) -> None:
         self.study = study
         self.live_map = (0, study.sweep.points - 1)
+        self._furthest = 0.0
         variants = range(len(study.variants))
         self.chains = {
             (variant, point): Chain(study, variant, point)
@@ -317,8 +319,11 @@ class StudyState:
     def progress(self) -> Progress:
         """How far the study has got."""
         chains = self.chains.values()
+        # A point that starts again on a finer grid must not send the bar backwards.
+        now = sum(chain.fraction() for chain in chains) / len(chains)
+        self._furthest = max(self._furthest, now)
         return Progress(
-            fraction=sum(chain.fraction() for chain in chains) / len(chains),
+            fraction=self._furthest,
             realizations=sum(chain.realizations for chain in chains),
             points_done=sum(chain.final for chain in chains),
             points_total=len(chains),
