@@ -191,5 +191,5 @@ openAddress();
 openPage().then((mayWrite) => {
   runButton.disabled = !mayWrite;
   // Parsing the plotting library takes a while: better before Run is pressed than after.
-  requestIdleCallback(() => plotly());
+  (window.requestIdleCallback ?? setTimeout)(() => plotly());
 });

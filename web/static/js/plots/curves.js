@@ -1,7 +1,7 @@
 // The plots of one sweep point: correlations, spectra, distance, contrast, domain durations.
 
 import { componentColours, CONTRAST_MAP, scaleOf, variantColour, variantMarker } from "../model/colour.js";
-import { axis } from "./surface.js";
+import { axis, scaleOfSweep } from "./surface.js";
 import { theme, token } from "./theme.js";
 
 const faded = (hex, alpha) =>
@@ -143,7 +143,7 @@ export function overviewFigure(axes, sweep, rows) {
       hovertemplate: "%{x:.4g}, %{y:.4g} km: %{z:.4f}<extra></extra>",
     }],
     layout: {
-      xaxis: axis(sweep.title, { type: sweep.logarithmic ? "log" : "linear", showgrid: false }),
+      xaxis: axis(sweep.title, { ...scaleOfSweep(sweep), showgrid: false }),
       yaxis: axis("Distance (km)", { showgrid: false, zeroline: false }),
       plot_bgcolor: token("--unwritten"),
     },

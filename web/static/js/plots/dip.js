@@ -1,7 +1,7 @@
 // C12(0) against the swept parameter: the plot that a study is run for.
 
 import { variantColour, variantMarker } from "../model/colour.js";
-import { axis } from "./surface.js";
+import { axis, scaleOfSweep } from "./surface.js";
 import { theme, token } from "./theme.js";
 
 /** How a point is marked: filled when settled, open while provisional, dotted when capped. */
@@ -100,8 +100,7 @@ function flagTrace(curve) {
  */
 export function dipFigure({ curves, sweep, top = null, mark = null, where = "" }) {
   const traces = curves.flatMap((curve) => [...valueTraces(curve), ...flagTrace(curve)]);
-  const scale = ({ logarithmic }) =>
-    logarithmic ? { type: "log", dtick: "D2", zeroline: false } : { type: "linear", zeroline: false };
+  const scale = (values) => ({ ...scaleOfSweep(values), zeroline: false });
   const layout = {
     xaxis: axis(sweep.title, scale(sweep)),
     yaxis: axis(`C12(0)${where}`, {

@@ -38,6 +38,10 @@ export function axis(title, more = {}) {
   };
 }
 
+/** How an axis of a sweep is scaled: a logarithmic one is marked at 1, 2 and 5. */
+export const scaleOfSweep = ({ logarithmic }) =>
+  (logarithmic ? { type: "log", dtick: "D2" } : { type: "linear" });
+
 function baseLayout() {
   return {
     paper_bgcolor: "rgba(0,0,0,0)",
