@@ -590,10 +590,8 @@ HEADLINE_VARIANTS = (
 )
 
 
-AXES_OF = frozenset(
-    f"ensemble.{name}" for name in ("window_ps", "samples", "distances", "max_lag_ps")
-)
-"""Parameters that fix the axes of a study's results, and so belong to all its variants."""
+AXES_OF = ("window_ps", "samples", "distances", "max_lag_ps")
+"""Ensemble parameters that fix the axes of a study's results, and so belong to all variants."""
 
 
 class Study(Stage):
@@ -618,14 +616,12 @@ class Study(Stage):
             raise Contradiction("variants", "two variants have the same name: rename one")
         ends = {self.sweep.start, self.sweep.stop}
         for index, variant in enumerate(self.variants):
-            for path in variant.changes.keys() & AXES_OF:
-                raise Contradiction(
-                    f"variants.{index}.changes",
-                    f"{path} sets an axis that all variants share: change it in the experiment",
-                )
             for value in ends:
                 try:
-                    with_changes(self.experiment, {**variant.changes, self.sweep.parameter: value})
+                    made = with_changes(
+                        self.experiment, {**variant.changes, self.sweep.parameter: value}
+                    )
+                    self._share_axes(made)
                 except Contradiction as error:
                     raise Contradiction(f"variants.{index}.changes", str(error)) from None
                 except ValueError as error:
@@ -636,6 +632,15 @@ class Study(Stage):
                         f"{path or 'experiment'}: {problem.get('msg', error)}",
                     ) from None
         return self
+
+    def _share_axes(self, variant: Experiment) -> None:
+        for name in AXES_OF:
+            if getattr(variant.ensemble, name) != getattr(self.experiment.ensemble, name):
+                raise Contradiction(
+                    f"ensemble.{name}",
+                    f"ensemble.{name} sets an axis that all variants share: change it in the "
+                    "experiment",
+                )
 
     def experiment_at(self, variant: int, point: int) -> Experiment:
         """The experiment of one point of one curve."""
