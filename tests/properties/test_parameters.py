@@ -216,6 +216,59 @@ def test_sweep_values_are_monotone_and_inside(
     assert all(low * (1 - 1e-11) <= value <= high * (1 + 1e-11) for value in values)
 
 
+@pytest.mark.parametrize(
+    ("study", "where", "says"),
+    [
+        ({"variants": [{"name": "a"}, {"name": "a"}]}, "variants", "same name"),
+        (
+            {"variants": [{"name": "a", "changes": {"ensemble.samples": 8192}}]},
+            "variants.0.changes",
+            "axis that all variants share",
+        ),
+        (
+            {"variants": [{"name": "a", "changes": {"ensemble": {"distances": 8}}}]},
+            "variants.0.changes",
+            "axis that all variants share",
+        ),
+        (
+            {"variants": [{"name": "a"}, {"name": "b", "changes": {"launch.power": 1}}]},
+            "variants.1.changes",
+            "names no parameter",
+        ),
+        (
+            {"variants": [{"name": "a", "changes": {"launch.share_1": 2}}]},
+            "variants.0.changes",
+            "less than or equal to 1",
+        ),
+        ({"sweep": {"stop": 1e9}}, "sweep", "less than or equal to 100000"),
+        ({"sweep": {"parameter": "ensemble.seed"}}, "parameter", "not a numeric parameter"),
+        ({"sweep": {"start": -1.0}}, "start", "choose linear"),
+        ({"sweep": {"start": 800.0}}, "stop", "stop must differ"),
+    ],
+)
+def test_contradictions_of_a_study(study: dict[str, Any], where: str, says: str) -> None:
+    """Variants and sweep ends are tried out before anything runs."""
+    with pytest.raises(ValidationError) as caught:
+        Study.model_validate(study)
+    contradiction = caught.value.errors()[0]["ctx"]["error"]
+    assert isinstance(contradiction, Contradiction)
+    assert contradiction.where == where
+    assert says in str(contradiction)
+
+
+def test_limits_of_size() -> None:
+    """10⁹ samples or 10⁶ points are refused at their field, with the limit."""
+    for tree, name, limit in (
+        ({"experiment": {"ensemble": {"samples": 10**9}}}, "samples", "4194304"),
+        ({"sweep": {"points": 10**6}}, "points", "10000"),
+    ):
+        with pytest.raises(ValidationError) as caught:
+            Study.model_validate(tree)
+        error = caught.value.errors()[0]
+        assert error["loc"][-1] == name
+        assert limit in error["msg"]
+
+
 def test_identity_depends_on_everything() -> None:
     """A seed, a name, a bound: any change is another study; the same study is the same run."""
     base = Study()
