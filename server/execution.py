@@ -179,7 +179,7 @@ class Execution:
         for variant, point in changed:
             result = state.point(variant, point)
             if result is not None:
-                points.append(rounded(result.summary()))
+                points.append(result.summary())
             if self._checkpoints is not None:
                 arrays = state.checkpoint(variant, point)
                 if arrays is not None:
@@ -188,7 +188,7 @@ class Execution:
 
     def _news_of_all(self, state: StudyState) -> News:
         points = [
-            rounded(result.summary())
+            result.summary()
             for variant in range(len(self._study.variants))
             for point in range(self._study.sweep.points)
             if (result := state.point(variant, point)) is not None
@@ -232,6 +232,7 @@ def map_event(rows: MapRows) -> dict[str, Any]:
         "first_row": rows.first_row,
         "rows": int(levels.shape[1]),
         "columns": int(levels.shape[2]),
+        "length_km": rows.length_km,
         "intensity_scale_w": rounded(rows.picture.intensity_scale_w),
         "data": base64.b64encode(levels.tobytes()).decode("ascii"),
     }

@@ -14,7 +14,7 @@ def title_of(study: Study) -> str:
     """A first title: what is swept and which curves are compared."""
     names = {path: (title, unit) for path, title, unit in numeric_parameters()}
     title, unit = names[study.sweep.parameter]
-    curves = ", ".join(variant.name for variant in study.variants)
+    curves = " · ".join(variant.name for variant in study.variants)
     span = f"{study.sweep.start:g}–{study.sweep.stop:g} {unit}".strip()
     return f"{title} {span}: {curves}"[:200]
 

@@ -584,7 +584,7 @@ HEADLINE_VARIANTS = (
         changes={"relation.kind": "derivative", "line.*.coupling": "manakov"},
     ),
     Variant(
-        name="derivative, uncoupled",
+        name="derivative, coupling off",
         changes={"relation.kind": "derivative", "line.*.coupling": "uncoupled"},
     ),
 )

@@ -92,6 +92,7 @@ class PointResult:
             "standard_error": central and _number(central[1]),
             "discretization_error": central and _number(self.discretization_error),
             "linear": linear and _number(linear.cross[len(linear.cross) // 2]),
+            "along": central and _pair(self.estimates["distance"]),
             "realizations": self.realizations,
             "target_met": self.target_met,
             "outcome": self.outcome,
@@ -129,13 +130,20 @@ class PointResult:
         }
 
 
-def _number(value: float) -> float | None:
-    """A float that JSON can carry, to 7 significant digits."""
-    return float(f"{value:.7g}") if np.isfinite(value) else None
-
-
 def _numbers(values: Real) -> list[float | None]:
-    return [_number(x) for x in values.tolist()]
+    """Floats that JSON can carry, to 7 significant digits; None where not finite."""
+    finite = np.isfinite(values)
+    plain = np.where(finite, values, 0.0)
+    size = np.abs(plain)
+    # Dividing by a power of ten, or multiplying, whichever is a whole number: both print short.
+    digits = 6 - np.floor(np.log10(np.where(size > 0.0, size, 1.0)))
+    up, down = 10.0 ** np.maximum(digits, 0.0), 10.0 ** np.maximum(-digits, 0.0)
+    short = np.rint(plain * up / down) * down / up
+    return [x if ok else None for x, ok in zip(short.tolist(), finite.tolist(), strict=True)]
+
+
+def _number(value: float) -> float | None:
+    return _numbers(np.array([value]))[0]
 
 
 def _pair(estimate: Estimate) -> dict[str, list[float | None]]:

@@ -61,6 +61,7 @@ class MapRows:
 
     variant: int
     point: int
+    length_km: float
     first_row: int
     picture: Picture
 
@@ -309,7 +310,8 @@ class StudyState:
         """The rows that a part of the live map added; None for any other task."""
         if not isinstance(outcome, MapPart):
             return None
-        return MapRows(task.variant, task.point, outcome.first_row, outcome.picture)
+        length_km = task.experiment.length_km
+        return MapRows(task.variant, task.point, length_km, outcome.first_row, outcome.picture)
 
     @property
     def finished(self) -> bool:

@@ -9,7 +9,6 @@ from pydantic import JsonValue
 from server.dependencies import TheRuns
 from server.errors import NotFound, OutOfRange
 from server.runs import Runs
-from server.stream import rounded
 from server.validation import field_at
 from solver.experiment import Study, with_changes
 from solver.result import StudyResult
@@ -52,10 +51,8 @@ async def _find(runs: Runs, choice: str, where: str) -> tuple[str, StudyResult, 
 def _curve(result: StudyResult, variant: int) -> dict[str, Any]:
     return {
         "name": result.study.variants[variant].name,
-        "sweep": rounded(result.axes.to_json()["sweep"], 12),
-        "points": [
-            None if point is None else rounded(point.summary()) for point in result.points[variant]
-        ],
+        "sweep": result.axes.sweep(),
+        "points": [None if point is None else point.summary() for point in result.points[variant]],
     }
 
 

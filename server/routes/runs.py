@@ -12,7 +12,6 @@ from server.dependencies import InPath, TheLog, TheRuns, within_limits
 from server.errors import NotFound
 from server.limits import check_study
 from server.schemas import Deleted, NewTitle, RunDetail, RunList, RunRow
-from server.stream import rounded
 from solver.experiment import Study
 from solver.result import StudyResult, curves_csv
 
@@ -97,10 +96,10 @@ async def view_run(run_id: InPath, runs: TheRuns, log: TheLog) -> dict[str, Any]
 
 def _shown(result: StudyResult) -> dict[str, Any]:
     return {
-        "axes": rounded(result.axes.to_json(), 12),
+        "axes": result.axes.to_json(),
         "variants": [variant.model_dump(mode="json") for variant in result.study.variants],
         "points": [
-            [None if point is None else rounded(point.summary()) for point in curve]
+            [None if point is None else point.summary() for point in curve]
             for curve in result.points
         ],
     }
@@ -110,7 +109,7 @@ def _shown(result: StudyResult) -> dict[str, Any]:
 async def get_point(run_id: InPath, variant: int, point: int, runs: TheRuns) -> dict[str, Any]:
     """Every curve of one point."""
     found = await runs.open_point(run_id, variant, point)
-    detail: dict[str, Any] = await asyncio.to_thread(lambda: rounded(found.detail()))
+    detail: dict[str, Any] = await asyncio.to_thread(found.detail)
     return detail
 
 

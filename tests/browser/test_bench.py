@@ -53,7 +53,7 @@ def test_the_headline_study_at_a_reduced_ensemble_draws_itself(
         assert drawn == [point["value"] for point in row]
     coupled, uncoupled = (
         curves(page, "dip")["derivative"],
-        curves(page, "dip")["derivative, uncoupled"],
+        curves(page, "dip")["derivative, coupling off"],
     )
     assert coupled[-1] is not None
     assert uncoupled[-1] is not None

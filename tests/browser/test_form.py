@@ -164,7 +164,7 @@ def test_variants_are_added_changed_and_removed(form: Page, watch: Watch) -> Non
     variants = _asked(form)["variants"]
     assert [variant["name"] for variant in variants] == [
         "derivative",
-        "derivative, uncoupled",
+        "derivative, coupling off",
         "steeper source",
     ]
     assert variants[2]["changes"] == {

@@ -18,6 +18,8 @@ export class Run {
   renew(view) {
     const { study, sequence, axes, variants, points, live_map: liveMap, ...row } = view;
     Object.assign(this, { row, study, sequence, axes, variants, points, liveMap });
+    this.lengthKm = axes.distance_km.at(-1);
+    this.stretched = new Map();
     this.viewed = sequence;
   }
 
@@ -35,6 +37,28 @@ export class Run {
 
   detail(variant, point) {
     return this.details.get(keyOf(variant, point)) ?? null;
+  }
+
+  /** Length of a point's line over that of the experiment as given; not 1 when length is varied. */
+  stretch(variant, point) {
+    const live = this.liveMap?.variant === variant && this.liveMap.point === point;
+    const known = this.summary(variant, point)?.length_km ?? (live ? this.liveMap.lengthKm : null);
+    return (known ?? this.lengthKm) / this.lengthKm;
+  }
+
+  /** Distances at which C12(0) of a point is known, km. */
+  distances(variant, point) {
+    const stretch = this.stretch(variant, point);
+    return this.axes.distance_km.map((z) => z * stretch);
+  }
+
+  /** Distance axis of a point's map, km; the same array for the same length. */
+  mapDistances(variant, point) {
+    const stretch = this.stretch(variant, point);
+    if (!this.stretched.has(stretch)) {
+      this.stretched.set(stretch, this.axes.map.distance_km.map((z) => z * stretch));
+    }
+    return this.stretched.get(stretch);
   }
 
   /** Whether an event is later than /view; the map's earlier rows are played again besides. */
@@ -65,7 +89,8 @@ export class Run {
       }
       return data.points;
     } else if (type === "map") {
-      this.liveMap = { variant: data.variant, point: data.point };
+      const { variant, point, length_km: lengthKm } = data;
+      this.liveMap = { variant, point, lengthKm };
       this.map(data.variant, data.point, data.columns).absorb(
         bytesOf(data.data), data.first_row, data.rows, data.intensity_scale_w,
       );

@@ -37,9 +37,7 @@ export class Results {
     powerUnit.addEventListener("change", () => this.#run && this.#drawAll());
     this.overview = find(root, "overview");
     this.overview.addEventListener("toggle", () => {
-      if (!this.#run) return;
-      this.#wantDetails();
-      this.#drawOverview();
+      if (this.#run) this.#drawOverview();
     });
     const whole = find(root, "whole-window");
     whole.addEventListener("change", () => this.#run && this.#frameMaps());
@@ -80,6 +78,7 @@ export class Results {
     } else if (type === "point") {
       if (this.selection.following) this.#followCurve();
       this.#drawDip();
+      this.#drawOverview();
       this.#details.stale();
       if (changed.some(({ has_map: has }) => has)) this.#drawMaps();
       this.#tablesSoon();
@@ -107,8 +106,6 @@ export class Results {
       return;
     }
     this.#drawPoint();
-    this.#drawOverview();
-    if (!this.selection.atEnd) this.#drawDip();
   }
 
   #selectionChanged() {
@@ -142,35 +139,28 @@ export class Results {
   }
 
   #wantDetails() {
-    const { variant, point, atEnd } = this.selection;
+    const { variant, point } = this.selection;
     const variants = [...new Set([variant, ...this.#shownVariants()])];
-    const wanted = variants.map((one) => [one, point]);
-    const everywhere = atEnd ? (this.overview.open ? [variant] : []) : variants;
-    for (const one of everywhere) {
-      for (let i = 0; i < this.sweep.values.length; i += 1) if (i !== point) wanted.push([one, i]);
-    }
-    this.#details.want(wanted);
+    this.#details.want(variants.map((one) => [one, point]));
   }
 
   /** C12(0) at the distance selected, in the shape of a summary; the end of the line has its own. */
   #summaryAt(variant, point) {
     const summary = this.#run.summary(variant, point);
     if (this.selection.atEnd || !summary || summary.outcome !== "completed") return summary;
-    const detail = this.#run.detail(variant, point);
-    if (!detail) return null;
     const { distance } = this.selection;
     return {
       ...summary,
-      value: detail.distance.value[distance],
-      standard_error: detail.distance.standard_error[distance],
+      value: summary.along.value[distance],
+      standard_error: summary.along.standard_error[distance],
       discretization_error: null,
+      linear: null,
     };
   }
 
   #drawDip() {
     const { sweep } = this;
-    const { point, atEnd, distance } = this.selection;
-    const km = this.#run.axes.distance_km[distance];
+    const { point, atEnd, km } = this.selection;
     const curves = this.#shownVariants().map((variant) => ({
       name: this.#run.variants[variant].name,
       index: variant,
@@ -199,15 +189,16 @@ export class Results {
     note.textContent = same || live ? name : `${name}, the nearest that is kept`;
     const map = this.#run.map(place.variant, place.point);
     this.#mapShown = place;
-    const km = this.selection.atEnd ? null : this.#run.axes.distance_km[this.selection.distance];
-    for (const plot of this.maps) plot.show(map, this.#run.axes, km);
+    const distances = this.#run.mapDistances(place.variant, place.point);
+    const km = this.selection.atEnd ? null : this.selection.km;
+    for (const plot of this.maps) plot.show(map, this.#run.axes.map.time_ps, distances, km);
     const kept = this.#run.summary(place.variant, place.point)?.has_map;
     if (kept && !map.complete) this.#details.wantMap(place.variant, place.point);
   }
 
   #drawPoint() {
     const { axes } = this.#run;
-    const { variant, point, distance } = this.selection;
+    const { variant, point } = this.selection;
     const own = this.#run.detail(variant, point);
     const shown = this.#shownVariants().flatMap((index) => {
       const detail = this.#run.detail(index, point);
@@ -221,11 +212,16 @@ export class Results {
     const flagged = summary && summary.outcome !== "completed";
     const instead = flagged ? `flagged: ${summary.outcome.replaceAll("_", " ")}` : "not computed yet";
     const draw = (key, ready, make) => (ready ? this.plots[key].draw(make) : this.plots[key].clear(instead));
-    const km = axes.distance_km[distance];
     draw("cross", shown.length, () => figures.crossFigure(axes, shown));
     draw("auto", own, () => figures.autoFigure(axes, own));
     draw("spectra", own, () => figures.spectraFigure(axes, own));
-    draw("distance", shown.length, () => figures.distanceFigure(axes, shown, km));
+    const lines = this.#shownVariants().flatMap((index) => {
+      const one = this.#run.summary(index, point);
+      if (one?.outcome !== "completed") return [];
+      const distances = this.#run.distances(index, point);
+      return [{ index, name: this.#run.variants[index].name, distances, summary: one }];
+    });
+    draw("distance", lines.length, () => figures.distanceFigure(lines, this.selection.km));
     draw("contrast", shown.length, () => figures.contrastFigure(axes, shown));
     draw("durations", shown.length, () => figures.durationsFigure(axes, shown));
     find(this.root, "readout-note").textContent = `at ${at}`;
@@ -239,8 +235,11 @@ export class Results {
     const { variant } = this.selection;
     const { sweep } = this;
     this.#note("overview", this.#run.variants[variant].name);
-    const rows = sweep.values.map((_, i) => this.#run.detail(variant, i)?.distance.value);
-    this.plots.overview.draw(() => figures.overviewFigure(this.#run.axes, sweep, rows));
+    const rows = sweep.values.map((_, i) => this.#run.summary(variant, i)?.along?.value);
+    const shares = sweep.values.some((_, i) => this.#run.stretch(variant, i) !== 1);
+    const whole = this.#run.lengthKm;
+    const places = this.#run.axes.distance_km.map((z) => (shares ? z / whole : z));
+    this.plots.overview.draw(() => figures.overviewFigure(places, sweep, rows, { shares }));
   }
 
   #note(panel, text) {

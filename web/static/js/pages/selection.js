@@ -60,6 +60,11 @@ export class Selection {
     return this.distance === this.#run.axes.distance_km.length - 1;
   }
 
+  /** The distance selected, in km of the line of the point selected. */
+  get km() {
+    return this.#run.distances(this.variant, this.point)[this.distance];
+  }
+
   /** Follow the run to another point. */
   move({ variant, point }) {
     if (variant === this.variant && point === this.point) return;
@@ -89,7 +94,7 @@ export class Selection {
   }
 
   #show() {
-    const km = `${brief(this.#run.axes.distance_km[this.distance])} km`;
+    const km = `${brief(this.km)} km`;
     this.part("pick-variant").value = this.variant;
     this.#slide("pick-point", this.point, this.sweep.text(this.point));
     this.#slide("pick-distance", this.distance, km);

@@ -103,19 +103,20 @@ export function spectraFigure(axes, detail) {
   };
 }
 
-export function distanceFigure(axes, shown, markKm) {
+/** shown: [{index, name, distances, summary}]; markKm: the distance selected. */
+export function distanceFigure(shown, markKm) {
   return {
-    traces: shown.map(({ index, name, detail }) => {
+    traces: shown.map(({ index, name, distances, summary }) => {
       const colour = variantColour(theme.name, index);
       return {
-        x: axes.distance_km,
-        y: detail.distance.value,
+        x: distances,
+        y: summary.along.value,
         name,
         mode: "lines+markers",
         line: { color: colour, width: 1.6 },
         marker: { color: colour, size: 6, symbol: variantMarker(index) },
         error_y: {
-          type: "data", array: detail.distance.standard_error, color: colour, thickness: 1.6, width: 3,
+          type: "data", array: summary.along.standard_error, color: colour, thickness: 1.6, width: 3,
         },
         hovertemplate: "%{x:.4g} km: %{y:.4f}<extra>%{fullData.name}</extra>",
       };
@@ -131,20 +132,24 @@ export function distanceFigure(axes, shown, markKm) {
   };
 }
 
-/** C12(0) over both at once; rows: for each sweep point its values along the line, or null. */
-export function overviewFigure(axes, sweep, rows) {
-  const z = axes.distance_km.map((_, i) => rows.map((row) => row?.[i] ?? null));
+/**
+ * C12(0) over both at once; rows: for each sweep point its values along the line, or null;
+ * places: distances in km, or shares of lines that differ in length.
+ */
+export function overviewFigure(places, sweep, rows, { shares }) {
+  const z = places.map((_, i) => rows.map((row) => row?.[i] ?? null));
+  const unit = shares ? "of the line" : "km";
   const most = Math.max(0.1, ...z.flat().map((value) => Math.abs(value ?? 0)));
   return {
     traces: [{
-      type: "heatmap", x: sweep.values, y: axes.distance_km, z,
+      type: "heatmap", x: sweep.values, y: places, z,
       zmin: -most, zmax: most, colorscale: scaleOf(CONTRAST_MAP), hoverongaps: false,
       colorbar: { title: { text: "C12(0)", side: "right" }, thickness: 12, outlinewidth: 0 },
-      hovertemplate: "%{x:.4g}, %{y:.4g} km: %{z:.4f}<extra></extra>",
+      hovertemplate: `%{x:.4g}, %{y:.4g} ${unit}: %{z:.4f}<extra></extra>`,
     }],
     layout: {
       xaxis: axis(sweep.title, { ...scaleOfSweep(sweep), showgrid: false }),
-      yaxis: axis("Distance (km)", { showgrid: false, zeroline: false }),
+      yaxis: axis(shares ? "Share of the line" : "Distance (km)", { showgrid: false, zeroline: false }),
       plot_bgcolor: token("--unwritten"),
     },
   };

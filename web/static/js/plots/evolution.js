@@ -36,7 +36,8 @@ export class EvolutionPlot {
   #canvas = document.createElement("canvas");
   #painted = new Uint8Array(0);
   #map = null;
-  #axes = null;
+  #times = null;
+  #distances = null;
   #markKm = null;
   #timer = null;
   #span = null;
@@ -52,16 +53,18 @@ export class EvolutionPlot {
     this.surface.afterFirst.push(() => this.#listen(element));
   }
 
-  /** Show a map (an Evolution); markKm is the distance selected. */
-  show(map, axes, markKm) {
-    const fresh = map !== this.#map || axes !== this.#axes || markKm !== this.#markKm;
+  /** Show a map (an Evolution) on its axes; markKm is the distance selected. */
+  show(map, times, distances, markKm) {
+    const fresh = map !== this.#map || times !== this.#times || distances !== this.#distances ||
+      markKm !== this.#markKm;
     if (map !== this.#map) {
       this.#canvas.width = map.columns;
       this.#canvas.height = map.rows;
       this.#painted = new Uint8Array(map.rows);
     }
     this.#map = map;
-    this.#axes = axes;
+    this.#times = times;
+    this.#distances = distances;
     this.#markKm = markKm;
     if (fresh || !this.surface.ready || map.scale !== this.scaleShown) {
       this.#paint();
@@ -105,7 +108,7 @@ export class EvolutionPlot {
   }
 
   #figure() {
-    const { distance_km: distances, time_ps: times } = this.#axes.map;
+    const [times, distances] = [this.#times, this.#distances];
     const [t0, t1] = edges(times);
     const [z0, z1] = edges(distances);
     const limits = { range: this.#span ?? [t0, t1], minallowed: t0, maxallowed: t1 };
@@ -166,7 +169,7 @@ export class EvolutionPlot {
 
   #tell(time, distance) {
     if (!Number.isFinite(time) || !Number.isFinite(distance)) return;
-    const { distance_km: distances, time_ps: times } = this.#axes.map;
+    const [times, distances] = [this.#times, this.#distances];
     const row = nearest(distances, distance);
     const column = nearest(times, time);
     const values = [0, 1, 2].map((plane) => this.#map.at(plane, row, column));
