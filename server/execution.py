@@ -5,6 +5,7 @@ The server's runs and ``crossdip run`` are both this.
 
 import asyncio
 import base64
+import contextlib
 import time
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
@@ -20,6 +21,7 @@ from solver.study import MapRows, StudyState, execute
 from solver.task import Task
 
 _SETTLING_S = 1.0
+_SAVING_INTERVAL_S = 0.3
 
 T = TypeVar("T")
 Outcome = tuple[Task, Any]
@@ -76,7 +78,7 @@ class Execution:
         self._outstanding = 0
         self._unsaved: dict[tuple[int, int], Arrays] = {}
         self._unsaved_some = asyncio.Event()
-        self._ending = False
+        self._ending = asyncio.Event()
         self.live_map: dict[str, int] | None = None
 
     async def ask(self, question: Callable[[StudyState], T]) -> T | None:
@@ -113,7 +115,7 @@ class Execution:
             for errand in self._errands:
                 errand.cancel()
             if saver is not None:
-                self._ending = True
+                self._ending.set()
                 self._unsaved_some.set()
                 await saver
 
@@ -206,15 +208,17 @@ class Execution:
         }
 
     async def _save_as_they_come(self) -> None:
-        """Write checkpoints beside the work; a failure ends the run."""
+        """Write checkpoints beside the work, now and then; a failure ends the run."""
         assert self._checkpoints is not None
         try:
-            while not self._ending:
+            while not self._ending.is_set():
                 await self._unsaved_some.wait()
                 self._unsaved_some.clear()
                 while self._unsaved:
                     place, arrays = self._unsaved.popitem()
                     await asyncio.to_thread(self._checkpoints.save, *place, arrays)
+                with contextlib.suppress(TimeoutError):
+                    await asyncio.wait_for(self._ending.wait(), _SAVING_INTERVAL_S)
         except OSError as error:
             self._inbox.put_nowait(error)
 

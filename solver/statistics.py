@@ -101,8 +101,9 @@ class Blocks:
         return Estimate(value, np.sqrt(variance))
 
     def arrays(self) -> dict[str, np.ndarray]:
-        """Everything needed to go on later."""
-        return {"sums": self.sums, "counts": self.counts, "capacity": np.array(self.capacity)}
+        """Everything needed to go on later; copies, which later realizations do not change."""
+        capacity = np.array(self.capacity)
+        return {"sums": self.sums.copy(), "counts": self.counts.copy(), "capacity": capacity}
 
     @classmethod
     def from_arrays(cls, arrays: Arrays) -> "Blocks":
@@ -134,8 +135,8 @@ class Means:
         return Estimate(mean, np.sqrt(variance / (self.count - 1)))
 
     def arrays(self) -> dict[str, np.ndarray]:
-        """Everything needed to go on later."""
-        return {"count": np.array(self.count), "sums": self.sums}
+        """Everything needed to go on later; copies, which later realizations do not change."""
+        return {"count": np.array(self.count), "sums": self.sums.copy()}
 
     @classmethod
     def from_arrays(cls, arrays: Arrays) -> "Means":

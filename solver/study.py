@@ -85,8 +85,8 @@ class Chain:
         self.transforms = 0
         self.outcome, self.advice = "completed", ""
         self.final = self.target_met = False
-        self._under_way: set[int] = set()
-        self._arrived: dict[int, RoundOutcome] = {}
+        self._round_end = 0
+        self._early: dict[int, RoundOutcome] = {}  # what overtook an earlier part of its round
         self._result: PointResult | None = None
 
     @property
@@ -95,15 +95,17 @@ class Chain:
         return self.blocks.realizations
 
     def next_round(self) -> list[RoundTask]:
-        """Tasks of the next round; none when the point is final."""
+        """Tasks of the next round, or of what is left of one; none when the point is final."""
         if self.final:
             return []
         size = realizations_per_task(self.ensemble.samples * self.refinement)
         first = self.realizations
-        # The first task finds the steps for all the others, so it goes alone.
-        last = self._wanted() if self.findings else first + size
-        last = min(last, self.ensemble.max_realizations)
-        tasks = [
+        if first >= self._round_end:
+            # The first task finds the steps for all the others, so it goes alone.
+            wanted = self._wanted() if self.findings else first + size
+            self._round_end = min(wanted, self.ensemble.max_realizations)
+        last = self._round_end
+        return [
             RoundTask(
                 key=f"round-{self.variant}-{self.point}-{self.refinement}-{start}",
                 variant=self.variant,
@@ -117,8 +119,6 @@ class Chain:
             )
             for start in range(first, last, size)
         ]
-        self._under_way = {task.first for task in tasks}
-        return tasks
 
     def _wanted(self) -> int:
         """Realizations to have after the next round, from the standard error of this one."""
@@ -137,15 +137,16 @@ class Chain:
         return error if math.isfinite(error) else math.inf
 
     def absorb(self, task: RoundTask, outcome: RoundOutcome) -> list[RoundTask]:
-        """Take an outcome in; when its round is whole, the tasks of the next one."""
-        if task.refinement != self.refinement or task.first not in self._under_way:
-            return []  # of a round that has been given up
-        self._arrived[task.first] = outcome
-        if self._under_way - self._arrived.keys():
+        """Take an outcome in; when its round is whole, the tasks of the next one.
+
+        Parts are added in the order of their realizations; one that comes early waits.
+        """
+        given_up = self.final or task.refinement != self.refinement
+        if given_up or task.first < self.realizations:
             return []
-        whole = [self._arrived[first] for first in sorted(self._arrived)]
-        self._arrived, self._result = {}, None
-        for part in whole:
+        self._early[task.first] = outcome
+        while (part := self._early.pop(self.realizations, None)) is not None:
+            self._result = None
             if part.outcome == "aliased" and self.refinement < MOST_REFINED:
                 self._start(2 * self.refinement)
                 return self.next_round()
@@ -153,11 +154,12 @@ class Chain:
                 self._start(self.refinement)
                 self.outcome, self.advice, self.final = part.outcome, part.advice, True
                 return []
-        for part in whole:
             self.blocks.add(part.blocks)
             self.means.add(len(part.blocks), part.sums)
             self.transforms += part.transforms
             self.findings = part.findings or self.findings
+        if self.realizations < self._round_end:
+            return []
         self._decide()
         return self.next_round()
 
@@ -203,10 +205,11 @@ class Chain:
         return self._result
 
     def checkpoint(self) -> dict[str, np.ndarray] | None:
-        """State after whole rounds, as arrays; None before the first."""
+        """State of what has been taken in, as arrays; None before anything has."""
         if self.findings is None and not self.final:
             return None
         arrays = {
+            "round_end": np.array(self._round_end),
             "refinement": np.array(self.refinement),
             "transforms": np.array(self.transforms),
             "outcome": np.array(self.outcome),
@@ -232,6 +235,7 @@ class Chain:
             return {k.removeprefix(prefix): v for k, v in arrays.items() if k.startswith(prefix)}
 
         self._start(int(arrays["refinement"]))
+        self._round_end = int(arrays["round_end"])
         self.transforms = int(arrays["transforms"])
         self.outcome, self.advice = str(arrays["outcome"]), str(arrays["advice"])
         self.blocks = Blocks.from_arrays(under("blocks/"))
@@ -252,7 +256,8 @@ class Chain:
                 float(linear["moment_cross"]),
             ),
         )
-        self._decide()
+        if self.realizations >= self._round_end:
+            self._decide()
 
 
 def _outside_in(count: int) -> list[int]:
@@ -336,7 +341,7 @@ class StudyState:
         return self.chains[variant, point].result()
 
     def checkpoint(self, variant: int, point: int) -> dict[str, np.ndarray] | None:
-        """A point's state after whole rounds, as arrays; None before the first."""
+        """A point's state so far, as arrays; None before anything was taken in."""
         return self.chains[variant, point].checkpoint()
 
     def restore(self, variant: int, point: int, arrays: Mapping[str, np.ndarray]) -> None:
