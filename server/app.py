@@ -8,7 +8,7 @@ from functools import partial
 
 from fastapi import FastAPI, Request
 from fastapi.exceptions import RequestValidationError
-from fastapi.responses import JSONResponse
+from fastapi.responses import JSONResponse, Response
 from starlette.exceptions import HTTPException
 from starlette.middleware.gzip import GZipMiddleware
 
@@ -114,8 +114,10 @@ def _handle_errors(app: FastAPI) -> None:
         return error_response(first_problem(error.errors(), root))
 
     @app.exception_handler(HTTPException)
-    async def http(request: Request, error: HTTPException) -> JSONResponse:
+    async def http(request: Request, error: HTTPException) -> Response:
         status = error.status_code
+        if status == 404 and pages.is_for_a_person(request):
+            return pages.missing(request)
         failure = ServerError(_HTTP_MESSAGES.get(status, str(error.detail)))
         failure.status, failure.code = status, _HTTP_CODES.get(status, "bad_request")
         return error_response(failure, dict(error.headers or {}))

@@ -10,12 +10,14 @@ from solver.experiment import Study
 def _within(value: Any, limit: int, where: str, noun: str, flag: str) -> None:
     if isinstance(value, int | float) and not isinstance(value, bool) and value > limit:
         raise OverLimit(
-            f"{value:,.10g} {noun} are more than this server allows, {limit:,}: use at most "
-            f"{limit:,}, or start the server with a larger --{flag}".replace(
-                ",", "\N{NARROW NO-BREAK SPACE}"
-            ),
+            f"{_grouped(value)} {noun} are more than this server allows, {_grouped(limit)}: use "
+            f"at most {_grouped(limit)}, or start the server with a larger --{flag}",
             where,
         )
+
+
+def _grouped(number: float) -> str:
+    return f"{number:,.10g}".replace(",", "\N{NARROW NO-BREAK SPACE}")
 
 
 def refuse_oversize(body: object, settings: Settings) -> None:

@@ -159,6 +159,19 @@ def enter(request: Request, refused: str = "") -> Response:
     return _page(request, "enter", problem=REFUSALS.get(refused, ""))
 
 
+def is_for_a_person(request: Request) -> bool:
+    """Whether a request is a browser's for a page, not a script's for data."""
+    asked = request.headers.get("accept", "")
+    return "text/html" in asked and not request.url.path.startswith(("/api/", "/static/"))
+
+
+def missing(request: Request) -> Response:
+    """What a person sees at an address that leads nowhere."""
+    response = _page(request, "missing")
+    response.status_code = 404
+    return response
+
+
 @router.get("/favicon.ico")
 def favicon() -> Response:
     """The mark, for browsers that ask for it by its old name."""

@@ -330,3 +330,17 @@ def test_the_library_stream_tells_of_every_run(server: LiveServer) -> None:
         "running",
         "done",
     ]
+
+
+def test_a_wrong_address_answers_a_person_with_a_page_and_a_script_with_the_error(
+    server: LiveServer,
+) -> None:
+    with httpx.Client(base_url=server.url) as client:
+        page = client.get("/nowhere", headers={"Accept": "text/html"})
+        data = client.get("/nowhere", headers={"Accept": "application/json"})
+        api = client.get("/api/nowhere", headers={"Accept": "text/html"})
+    assert (page.status_code, data.status_code, api.status_code) == (404, 404, 404)
+    assert "nothing at this address" in page.text
+    assert "<html" in page.text
+    assert data.json()["error"]["code"] == "not_found"
+    assert api.json()["error"]["code"] == "not_found"

@@ -6,6 +6,7 @@ import sys
 from pathlib import Path
 from typing import Any
 
+import h5py
 import pytest
 
 from solver.result import read_result
@@ -39,6 +40,36 @@ def test_run_writes_what_the_server_would(
             assert their_point is not None
             assert our_point.detail() == their_point.detail()
     assert sorted(path.name for path in tmp_path.iterdir()) == ["result.h5", "study.json"]
+
+
+def test_any_number_of_workers_gives_the_same_bits(tmp_path: Path) -> None:
+    """Several rounds of several tasks for each point, so that the order of completion differs."""
+    study = tiny(3, standard_error_target=0.03, max_realizations=160)
+    path = tmp_path / "study.json"
+    path.write_text(json.dumps(study))
+    results = []
+    for workers in (1, 2, 3):
+        output = tmp_path / f"{workers}.h5"
+        ended = crossdip("run", str(path), "-o", str(output), "--workers", str(workers))
+        assert ended.returncode == 0, ended.stderr
+        results.append(_everything(output))
+    assert any(int(value) > 16 for name, value in results[0].items() if "@realizations" in name)
+    assert results[1] == results[0]
+    assert results[2] == results[0]
+
+
+def _everything(path: Path) -> dict[str, Any]:
+    """Every dataset of a result, as bytes, and every attribute that the computation decides."""
+    found: dict[str, Any] = {}
+
+    def keep(name: str, node: h5py.Group | h5py.Dataset) -> None:
+        if isinstance(node, h5py.Dataset):
+            found[name] = node[()].tobytes()
+        found.update({f"{name}@{key}": value for key, value in node.attrs.items()})
+
+    with h5py.File(path, "r") as file:
+        file.visititems(keep)
+    return found
 
 
 def _with(**ensemble: Any) -> str:
