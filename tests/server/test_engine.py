@@ -13,8 +13,8 @@ from pathlib import Path
 import pytest
 
 from server.engine import Engine
+from tests.asynchronous import run
 from tests.doubling import double_slowly
-from tests.serving import TIMEOUT_S
 
 
 def _fail() -> None:
@@ -86,7 +86,7 @@ def test_a_scheduler_that_comes_back_gets_the_pending_tasks_again(tmp_path: Path
             assert await asyncio.gather(*tasks) == [2 * number for number in range(100)]
             await engine.stop()
 
-    asyncio.run(asyncio.wait_for(check(), TIMEOUT_S))
+    run(check())
 
 
 def test_own_workers_are_capped_failures_come_through_and_cancelled_tasks_go(
@@ -111,4 +111,4 @@ def test_own_workers_are_capped_failures_come_through_and_cancelled_tasks_go(
             await engine.stop()
         assert engine.workers == 0
 
-    asyncio.run(asyncio.wait_for(check(), TIMEOUT_S))
+    run(check())

@@ -9,6 +9,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from server.stream import Board, EventLog, RunFeed, rounded
+from tests.asynchronous import run
 
 
 async def _read(log: EventLog, after: str = "") -> list[tuple[str, str]]:
@@ -24,14 +25,15 @@ def _filled(count: int, limit_bytes: int = 10_000) -> EventLog:
 
 @given(st.integers(1, 30), st.data())
 def test_a_reader_who_comes_back_gets_exactly_what_it_missed(count: int, data: Any) -> None:
+    seen = data.draw(st.integers(0, count - 1))
+
     async def check() -> None:
         log = _filled(count)
         log.close()
-        seen = data.draw(st.integers(0, count - 1))
         events = await _read(log, f"epoch-{seen}")
         assert events == [("tick", f'{{"n":{number}}}') for number in range(seen, count)]
 
-    asyncio.run(check())
+    run(check())
 
 
 def test_an_unknown_or_dropped_past_is_announced_once() -> None:
@@ -41,7 +43,7 @@ def test_an_unknown_or_dropped_past_is_announced_once() -> None:
         for after in ("other-3", "epoch-1", "epoch-999", "epoch-x", "nonsense", ""):
             assert await _read(log, after) == [("reset", "{}"), ("tick", '{"n":49}')]
 
-    asyncio.run(check())
+    run(check())
 
 
 def test_who_comes_after_the_end_is_told_the_last_state() -> None:
@@ -52,7 +54,7 @@ def test_who_comes_after_the_end_is_told_the_last_state() -> None:
         log.trim()
         assert await _read(log, "epoch-1") == [("reset", "{}"), ("tick", '{"n":2}')]
 
-    asyncio.run(check())
+    run(check())
 
 
 def test_live_events_reach_every_follower_and_a_slow_one_is_reset() -> None:
@@ -73,7 +75,7 @@ def test_live_events_reach_every_follower_and_a_slow_one_is_reset() -> None:
         assert [event.event async for event in slow] == ["reset"]
         assert log.followers == 0
 
-    asyncio.run(check())
+    run(check())
 
 
 def test_memory_of_a_log_is_bounded() -> None:
@@ -101,7 +103,7 @@ def test_points_share_events_and_the_last_word_is_never_lost() -> None:
         assert latest == {0: 195, 1: 196, 2: 197, 3: 198, 4: 199}
         assert log._events[-1] == ("progress", '{"fraction":0.995}')
 
-    asyncio.run(check())
+    run(check())
 
 
 def test_closed_logs_are_given_up_but_open_ones_stay() -> None:
@@ -115,7 +117,7 @@ def test_closed_logs_are_given_up_but_open_ones_stay() -> None:
         assert board.known("49")
         assert not board.known("0")
 
-    asyncio.run(check())
+    run(check())
 
 
 @given(st.floats())
