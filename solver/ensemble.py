@@ -194,20 +194,19 @@ def run_round(task: RoundTask) -> RoundOutcome:
         if found.outcome.kind != "completed":
             return RoundOutcome(found.outcome.kind, found.outcome.advice)
         steps, spent = found.steps, found.transforms
-        findings = Findings(
-            steps,
-            found.discretization_error,
-            _picture(experiment, task.refinement, steps),
-            _linear_regime(experiment, bench.layout),
-        )
+        picture, outcome = _picture(experiment, task.refinement, steps)
+        if outcome.kind != "completed":
+            return RoundOutcome(outcome.kind, outcome.advice)
+        linear = _linear_regime(experiment, bench.layout)
+        findings = Findings(steps, found.discretization_error, picture, linear)
     pieces = bench.pieces(steps)
     arrived, recorded, outcome = bench.run(fields, pieces)
     if outcome.kind != "completed":
         return RoundOutcome(outcome.kind, outcome.advice)
     detected = detect(arrived, experiment.receiver, bench.grid)
-    blocks, linear = features(bench.layout, fields, arrived, detected, recorded)
+    blocks, means = features(bench.layout, fields, arrived, detected, recorded)
     spent += sum(piece.steps for piece in pieces) * bench.scheme.transforms_per_step
-    return RoundOutcome("completed", "", blocks, sums_and_squares(linear), spent, findings)
+    return RoundOutcome("completed", "", blocks, sums_and_squares(means), spent, findings)
 
 
 def _linear_regime(experiment: Experiment, layout: Layout) -> LinearRegime:
@@ -245,28 +244,30 @@ class _Map:
     def levels(self, field: Field) -> np.ndarray:
         return _levels(field, self.columns, self.scale_w)
 
-    def march(self, field: Field, pieces: Sequence[Piece], rows: list[np.ndarray]) -> Field:
-        """Append a row for each recorded distance; the field at the end, which may overflow."""
+    def march(
+        self, field: Field, pieces: Sequence[Piece], rows: list[np.ndarray]
+    ) -> tuple[Field, Outcome]:
+        """Append a row for each recorded distance; the field at the end and the outcome."""
         work = self.bench.work(1)
         work.buffer[:] = field
-        self.bench.track.march(
+        outcome = self.bench.track.march(
             work,
             pieces,
             self.bench.scheme,
             self.bench.precision,
-            edge_limit=1.0,
+            edge_limit=self.bench.edge_limit,
             guard=1.0,
             observe=lambda _, here: rows.append(self.levels(here[0])),
         )
-        return np.array(work.buffer)
+        return np.array(work.buffer), outcome
 
 
-def _picture(experiment: Experiment, refinement: int, steps: int) -> Picture:
+def _picture(experiment: Experiment, refinement: int, steps: int) -> tuple[Picture, Outcome]:
     whole = _Map(experiment, refinement, steps)
     field = whole.bench.fields(range(1))
     rows = [whole.levels(field[0])]
-    whole.march(field, whole.pieces, rows)
-    return Picture(np.stack(rows, axis=1), whole.scale_w)
+    _, outcome = whole.march(field, whole.pieces, rows)
+    return Picture(np.stack(rows, axis=1), whole.scale_w), outcome
 
 
 def run_map(task: MapTask) -> MapPart:
@@ -274,7 +275,7 @@ def run_map(task: MapTask) -> MapPart:
 
     The first round of the same point replaces it by a map whose steps have been checked.
     """
-    whole = _Map(task.experiment, 1, None)
+    whole = _Map(task.experiment, task.refinement, None)
     rows: list[np.ndarray] = []
     field = task.field
     if field is None:
@@ -284,9 +285,10 @@ def run_map(task: MapTask) -> MapPart:
     ends = np.flatnonzero([piece.recorded for piece in whole.pieces]) + 1
     start = 0 if task.part == 0 else ends[task.part * per_part - 1]
     stop = ends[(task.part + 1) * per_part - 1]
-    field = whole.march(field, whole.pieces[start:stop], rows)
+    field, outcome = whole.march(field, whole.pieces[start:stop], rows)
+    if outcome.kind != "completed":
+        return MapPart(outcome.kind)
     first_row = 0 if task.part == 0 else task.part * per_part + 1
     last = task.part + 1 == MAP_PARTS
-    return MapPart(
-        first_row, Picture(np.stack(rows, axis=1), whole.scale_w), None if last else field
-    )
+    picture = Picture(np.stack(rows, axis=1), whole.scale_w)
+    return MapPart("completed", first_row, picture, None if last else field)

@@ -13,6 +13,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from solver.experiment import Study
+from solver.grid import Field
 from solver.result import LinearRegime, Picture, PointResult, StudyResult
 from solver.statistics import Blocks, Estimators, Layout, Means, last_central
 from solver.task import Findings, MapPart, MapTask, RoundOutcome, RoundTask, Task
@@ -260,6 +261,11 @@ class Chain:
             self._decide()
 
 
+def _map_task(task: MapTask, part: int, refinement: int, field: Field | None) -> MapTask:
+    key = f"map-{refinement}-{part}"
+    return replace(task, key=key, part=part, refinement=refinement, field=field)
+
+
 def _outside_in(count: int) -> list[int]:
     """0 to count − 1 in an order that shows the whole curve early: ends, middle, quarters…"""
     order = [0, count - 1] if count > 1 else [0]
@@ -296,24 +302,26 @@ class StudyState:
         variant, point = self.live_map
         chain = self.chains[self.live_map]
         if not chain.findings and not chain.final:
-            tasks.append(MapTask("map-0", variant, point, 1, chain.experiment, part=0))
+            tasks.append(MapTask("map-1-0", variant, point, 1, chain.experiment, part=0))
         return sorted(tasks, key=lambda task: -task.priority)
 
     def absorb(self, task: Task, outcome: RoundOutcome | MapPart) -> list[Task]:
         """Take in what a task came to; returns the tasks that have become ready."""
         if isinstance(task, MapTask):
             assert isinstance(outcome, MapPart)
+            finer = 2 * task.refinement
+            if outcome.outcome == "aliased" and finer <= MOST_REFINED:
+                return [_map_task(task, 0, finer, None)]
             if outcome.field is None:
                 return []
-            part = task.part + 1
-            return [replace(task, key=f"map-{part}", part=part, field=outcome.field)]
+            return [_map_task(task, task.part + 1, task.refinement, outcome.field)]
         assert isinstance(task, RoundTask)
         assert isinstance(outcome, RoundOutcome)
         return list(self.chains[task.variant, task.point].absorb(task, outcome))
 
     def live_map_rows(self, task: Task, outcome: RoundOutcome | MapPart) -> MapRows | None:
         """The rows that a part of the live map added; None for any other task."""
-        if not isinstance(outcome, MapPart):
+        if not isinstance(outcome, MapPart) or outcome.picture is None:
             return None
         length_km = task.experiment.length_km
         return MapRows(task.variant, task.point, length_km, outcome.first_row, outcome.picture)

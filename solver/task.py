@@ -36,10 +36,12 @@ class RoundTask(Task):
 
 @dataclass(frozen=True)
 class MapTask(Task):
-    """Part ``part`` of the map of realization 0; ``field`` is None at the launch."""
+    """Part ``part`` of the map of realization 0, on a time step divided by ``refinement``;
+    ``field`` is None at the launch."""
 
     kind: ClassVar[str] = "map"
     part: int
+    refinement: int = 1
     field: Field | None = None
 
 
@@ -70,8 +72,12 @@ class RoundOutcome:
 
 @dataclass(frozen=True)
 class MapPart:
-    """Rows of a map from ``first_row`` on, and the field to go on with (None: the last part)."""
+    """Rows of a map from ``first_row`` on, and the field to go on with (None: the last part).
 
-    first_row: int
-    picture: Picture
-    field: Field | None
+    Without a picture where the field did not fit its grid, as ``outcome`` then says.
+    """
+
+    outcome: str
+    first_row: int = 0
+    picture: Picture | None = None
+    field: Field | None = None

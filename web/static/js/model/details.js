@@ -95,7 +95,7 @@ export class Details {
     if (!this.#mapWanted) return;
     const [variant, point] = this.#mapWanted;
     this.#mapWanted = null;
-    if (this.run.maps.get(keyOf(variant, point))?.complete) return;
+    if (this.run.hasFinalMap(variant, point)) return;
     try {
       this.run.keepMap(variant, point, await getMap(api.map(this.run.id, variant, point)));
       if (!this.#stopped) this.arrived("map", variant, point);

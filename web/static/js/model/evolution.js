@@ -8,11 +8,8 @@ export class Evolution {
     this.columns = columns;
     this.scale = 0;
     this.data = new Uint8Array(3 * rows * columns);
+    // How often each row has been taken in; 0 while it is awaited.
     this.filled = new Uint8Array(rows);
-  }
-
-  get complete() {
-    return this.filled.every(Boolean);
   }
 
   /** Take in rows first..first+count, given as three planes one after the other. */
@@ -26,7 +23,7 @@ export class Evolution {
         (plane * this.rows + first) * size,
       );
     }
-    this.filled.fill(1, first, first + count);
+    for (let row = first; row < first + count; row += 1) this.filled[row] += 1;
   }
 
   // Rows that arrived under another scale are requantized, so one scale holds for the whole map.

@@ -9,6 +9,7 @@ export const keyOf = (variant, point) => `${variant}-${point}`;
 export class Run {
   constructor(view) {
     this.maps = new Map();
+    this.finalMaps = new Set();
     this.details = new Map();
     this.revisions = new Map();
     this.renew(view);
@@ -91,9 +92,12 @@ export class Run {
     } else if (type === "map") {
       const { variant, point, length_km: lengthKm } = data;
       this.liveMap = { variant, point, lengthKm };
-      this.map(data.variant, data.point, data.columns).absorb(
-        bytesOf(data.data), data.first_row, data.rows, data.intensity_scale_w,
-      );
+      // The preview must not write over the map whose steps have been checked.
+      if (!this.hasFinalMap(data.variant, data.point)) {
+        this.map(data.variant, data.point, data.columns).absorb(
+          bytesOf(data.data), data.first_row, data.rows, data.intensity_scale_w,
+        );
+      }
     }
     return [];
   }
@@ -111,8 +115,14 @@ export class Run {
     return this.maps.get(key);
   }
 
+  /** Whether the whole checked map of a point is here. */
+  hasFinalMap(variant, point) {
+    return this.finalMaps.has(keyOf(variant, point));
+  }
+
   /** Take in a whole map that was fetched. */
   keepMap(variant, point, { data, rows, columns, scale }) {
+    this.finalMaps.add(keyOf(variant, point));
     this.map(variant, point, columns).absorb(data, 0, rows, scale);
   }
 

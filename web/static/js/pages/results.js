@@ -193,7 +193,7 @@ export class Results {
     const km = this.selection.atEnd ? null : this.selection.km;
     for (const plot of this.maps) plot.show(map, this.#run.axes.map.time_ps, distances, km);
     const kept = this.#run.summary(place.variant, place.point)?.has_map;
-    if (kept && !map.complete) this.#details.wantMap(place.variant, place.point);
+    if (kept && !this.#run.hasFinalMap(place.variant, place.point)) this.#details.wantMap(place.variant, place.point);
   }
 
   #drawPoint() {

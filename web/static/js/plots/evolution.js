@@ -95,13 +95,13 @@ export class EvolutionPlot {
     if (scale !== this.scalePainted) this.#painted.fill(0);
     this.scalePainted = scale;
     for (let row = 0; row < rows; row += 1) {
-      if (!filled[row] || this.#painted[row]) continue;
+      if (this.#painted[row] === filled[row]) continue;
       const image = context.createImageData(columns, 1);
       const pixels = new Uint32Array(image.data.buffer);
       const start = (this.plane * rows + row) * columns;
       for (let i = 0; i < columns; i += 1) pixels[i] = this.words[data[start + i]];
       context.putImageData(image, 0, rows - 1 - row);
-      this.#painted[row] = 1;
+      this.#painted[row] = filled[row];
       changed = true;
     }
     return changed;

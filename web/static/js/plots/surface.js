@@ -81,6 +81,7 @@ export class Surface {
   /** make() returns {traces, layout}; it is called when the plot is really drawn. */
   draw(make) {
     this.#pending = make;
+    delete this.element.dataset.instead;
     this.#schedule();
   }
 
