@@ -12,7 +12,6 @@ from solver.experiment import Experiment
 from solver.grid import Complex, Field, Grid, Real
 from solver.kernels import column_powers, intensity_moments
 from solver.propagation import (
-    PATIENCE,
     STEP_LIMIT,
     edge_limit,
     relative_error,
@@ -27,10 +26,12 @@ from solver.statistics import Layout, central, features, moments, sums_and_squar
 from solver.task import Findings, MapPart, MapTask, RoundOutcome, RoundTask
 from solver.theory import linear_correlations
 from solver.track import COMPLETED, Light, Outcome, Piece, Track
-from solver.transforms import Transforms, batch_size, transforms
+from solver.transforms import COMPLEX, Transforms, batch_size, transforms
 
 CHECKED = 4
 """Realizations on which the steps are found and the discretization error is measured."""
+PATIENCE = 3
+"""Times a pilot takes half as many steps again before a full band is put down to the light."""
 PILOT_GUARD = 1 / 30
 """The pilot stays this much clearer of a band ended by its steps than the ensemble must."""
 MAP_PARTS = 16
@@ -45,7 +46,6 @@ class Bench:
     def __init__(self, experiment: Experiment, refinement: int, recorded_km: Sequence[float]):
         ensemble = experiment.ensemble
         self.experiment = experiment
-        self.refinement = refinement
         self.precision = ensemble.precision
         self.layout = Layout.of(ensemble)
         self.grid = Grid(ensemble.samples * refinement, ensemble.time_step_ps / refinement)
@@ -64,10 +64,10 @@ class Bench:
         self.scheme = scheme_for(self.tolerance)
         self.edge_limit = edge_limit(self.tolerance, self.precision)
 
-    def fields(self, realizations: range) -> Complex:
-        """Launched fields, √W, shape (realizations, 2, samples)."""
+    def fields(self, realizations: range) -> Field:
+        """Launched fields, √W, shape (realizations, 2, samples), in the ensemble's precision."""
         noise = draw(self.experiment.ensemble.seed, realizations, self.grid)
-        return synthesize(noise, self.response)
+        return synthesize(noise, self.response).astype(COMPLEX[self.precision])
 
     def expected_steps(self) -> int:
         """Steps that should meet the tolerance, judged from the launch alone, within the limit."""
@@ -93,7 +93,7 @@ class Bench:
         self, fields: Field, pieces: Sequence[Piece], guard: float = 1.0
     ) -> tuple[Field, Real, Outcome]:
         """Propagate; returns fields at the end, moments (realizations, distances, 5), outcome."""
-        arrived = np.empty(fields.shape, dtype=self.work(1).buffer.dtype)
+        arrived = np.empty_like(fields)
         recorded = np.empty((len(fields), self.layout.distances, 5))
         batch = batch_size(self.grid.samples)
         for start in range(0, len(fields), batch):
@@ -139,10 +139,10 @@ class Pilot:
     outcome: Outcome = COMPLETED
 
 
-def pilot(bench: Bench, fields: Field) -> Pilot:
+def pilot(bench: Bench, fields: Field, fewest: int) -> Pilot:
     """Find the steps for a whole ensemble on a few of its realizations, which are all alike."""
     scheme, order = bench.scheme, bench.scheme.order
-    steps, spent, doublings = float(bench.expected_steps() * bench.refinement), 0, 0
+    steps, spent, added = float(max(fewest, bench.expected_steps())), 0, 0
     while True:
         if steps >= STEP_LIMIT:
             return Pilot(
@@ -165,9 +165,9 @@ def pilot(bench: Bench, fields: Field) -> Pilot:
             if outcome.kind != "completed":
                 break
             runs.append((count, field, recorded[:, -1].mean(axis=0)))
-        if outcome.kind == "aliased" and doublings < PATIENCE:
+        if outcome.kind == "steps_too_long" or (outcome.kind == "aliased" and added < PATIENCE):
             # Steps that are too long scatter energy to the edges of the band by themselves.
-            steps, doublings = 2.0 * steps, doublings + 1
+            steps, added = 1.5 * steps, added + 1
             continue
         if outcome.kind != "completed":
             return Pilot(count, np.nan, spent, outcome)
@@ -190,23 +190,24 @@ def run_round(task: RoundTask) -> RoundOutcome:
     fields = bench.fields(range(task.first, task.first + task.count))
     steps, spent, findings = task.steps, 0, None
     if steps is None:
-        found = pilot(bench, fields[:CHECKED])
+        found = pilot(bench, fields[:CHECKED], task.fewest)
         if found.outcome.kind != "completed":
             return RoundOutcome(found.outcome.kind, found.outcome.advice)
         steps, spent = found.steps, found.transforms
         picture, outcome = _picture(experiment, task.refinement, steps)
         if outcome.kind != "completed":
-            return RoundOutcome(outcome.kind, outcome.advice)
+            return RoundOutcome(outcome.kind, outcome.advice, steps=steps)
         linear = _linear_regime(experiment, bench.layout)
         findings = Findings(steps, found.discretization_error, picture, linear)
     pieces = bench.pieces(steps)
     arrived, recorded, outcome = bench.run(fields, pieces)
     if outcome.kind != "completed":
-        return RoundOutcome(outcome.kind, outcome.advice)
+        return RoundOutcome(outcome.kind, outcome.advice, steps=steps)
     detected = detect(arrived, experiment.receiver, bench.grid)
     blocks, means = features(bench.layout, fields, arrived, detected, recorded)
     spent += sum(piece.steps for piece in pieces) * bench.scheme.transforms_per_step
-    return RoundOutcome("completed", "", blocks, sums_and_squares(means), spent, findings)
+    sums = sums_and_squares(means)
+    return RoundOutcome("completed", "", blocks, sums, spent, steps, findings)
 
 
 def _linear_regime(experiment: Experiment, layout: Layout) -> LinearRegime:
@@ -217,37 +218,31 @@ def _linear_regime(experiment: Experiment, layout: Layout) -> LinearRegime:
     )
 
 
-def _levels(field: Field, columns: int, scale_w: float) -> np.ndarray:
-    """One row of a map, uint8, shape (3, columns), from a field of shape (2, samples)."""
-    first, second = column_powers(field, columns)
-    total = first + second
-    contrast = (first - second) / np.where(total > 0.0, total, 1.0)
-    rows = np.stack([127.5 * (contrast + 1.0), first / scale_w, second / scale_w])
-    return np.asarray(np.clip(np.rint(rows), 0, 255), dtype=np.uint8)
-
-
-def _scale_w(experiment: Experiment) -> float:
-    return BRIGHTEST * 1e-3 * experiment.launch.total_power_mw / 255.0
-
-
 class _Map:
     """A bench for one realization, recording the rows of a map."""
 
     def __init__(self, experiment: Experiment, refinement: int, steps: float | None) -> None:
         length = experiment.length_km
-        rows = [length * (i + 1) / MAP_ROWS for i in range(MAP_ROWS)]
-        self.bench = Bench(experiment, refinement, rows)
-        self.pieces = self.bench.pieces(self.bench.expected_steps() if steps is None else steps)
-        self.columns = min(MAP_COLUMNS, experiment.ensemble.samples)
-        self.scale_w = _scale_w(experiment)
+        distances_km = [length * (i + 1) / MAP_ROWS for i in range(MAP_ROWS)]
+        self.bench = Bench(experiment, refinement, distances_km)
+        if steps is None:
+            steps = self.bench.expected_steps() * refinement
+        self.pieces = self.bench.pieces(steps)
+        self._columns = min(MAP_COLUMNS, experiment.ensemble.samples)
+        self._scale_w = BRIGHTEST * 1e-3 * experiment.launch.total_power_mw / 255.0
+        self._rows: list[Real] = []
 
-    def levels(self, field: Field) -> np.ndarray:
-        return _levels(field, self.columns, self.scale_w)
+    def launch(self) -> Field:
+        """The field of realization 0; its row is the first."""
+        field = self.bench.fields(range(1))
+        self._keep(field)
+        return field
 
-    def march(
-        self, field: Field, pieces: Sequence[Piece], rows: list[np.ndarray]
-    ) -> tuple[Field, Outcome]:
-        """Append a row for each recorded distance; the field at the end and the outcome."""
+    def _keep(self, field: Field) -> None:
+        self._rows.append(column_powers(field[0], self._columns))
+
+    def march(self, field: Field, pieces: Sequence[Piece]) -> tuple[Field, Outcome]:
+        """Keep a row for each recorded distance; the field at the end and the outcome."""
         work = self.bench.work(1)
         work.buffer[:] = field
         outcome = self.bench.track.march(
@@ -257,17 +252,24 @@ class _Map:
             self.bench.precision,
             edge_limit=self.bench.edge_limit,
             guard=1.0,
-            observe=lambda _, here: rows.append(self.levels(here[0])),
+            observe=lambda _, here: self._keep(here),
         )
         return np.array(work.buffer), outcome
+
+    def picture(self) -> Picture:
+        """The rows kept, as levels."""
+        first, second = np.stack(self._rows, axis=1)
+        total = first + second
+        contrast = (first - second) / np.where(total > 0.0, total, 1.0)
+        scaled = [127.5 * (contrast + 1.0), first / self._scale_w, second / self._scale_w]
+        levels = np.clip(np.rint(np.stack(scaled)), 0, 255).astype(np.uint8)
+        return Picture(levels, self._scale_w)
 
 
 def _picture(experiment: Experiment, refinement: int, steps: int) -> tuple[Picture, Outcome]:
     whole = _Map(experiment, refinement, steps)
-    field = whole.bench.fields(range(1))
-    rows = [whole.levels(field[0])]
-    _, outcome = whole.march(field, whole.pieces, rows)
-    return Picture(np.stack(rows, axis=1), whole.scale_w), outcome
+    _, outcome = whole.march(whole.launch(), whole.pieces)
+    return whole.picture(), outcome
 
 
 def run_map(task: MapTask) -> MapPart:
@@ -276,19 +278,14 @@ def run_map(task: MapTask) -> MapPart:
     The first round of the same point replaces it by a map whose steps have been checked.
     """
     whole = _Map(task.experiment, task.refinement, None)
-    rows: list[np.ndarray] = []
-    field = task.field
-    if field is None:
-        field = whole.bench.fields(range(1))
-        rows.append(whole.levels(field[0]))
+    field = whole.launch() if task.field is None else task.field
     per_part = MAP_ROWS // MAP_PARTS
     ends = np.flatnonzero([piece.recorded for piece in whole.pieces]) + 1
     start = 0 if task.part == 0 else ends[task.part * per_part - 1]
     stop = ends[(task.part + 1) * per_part - 1]
-    field, outcome = whole.march(field, whole.pieces[start:stop], rows)
+    field, outcome = whole.march(field, whole.pieces[start:stop])
     if outcome.kind != "completed":
         return MapPart(outcome.kind)
     first_row = 0 if task.part == 0 else task.part * per_part + 1
     last = task.part + 1 == MAP_PARTS
-    picture = Picture(np.stack(rows, axis=1), whole.scale_w)
-    return MapPart("completed", first_row, picture, None if last else field)
+    return MapPart("completed", first_row, whole.picture(), None if last else field)

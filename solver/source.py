@@ -30,12 +30,13 @@ def draw(seed: int, realizations: range, grid: Grid) -> Complex:
     """
     samples = grid.samples
     outwards = np.argsort(np.abs(np.fft.fftfreq(samples)), kind="stable")
+    place = np.argsort(outwards)
     noise = np.empty((len(realizations), 2, samples), dtype=np.complex128)
     for row, index in zip(noise, realizations, strict=True):
         stream = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(index,)))
-        values = stream.standard_normal((samples, 4)) * np.sqrt(0.5)
-        row[0, outwards] = values[:, 0] + 1j * values[:, 1]
-        row[1, outwards] = values[:, 2] + 1j * values[:, 3]
+        values = stream.standard_normal((samples, 4)).view(np.complex128)
+        np.take(values.T, place, axis=1, out=row)
+    noise *= np.sqrt(0.5)
     return noise
 
 

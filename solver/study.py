@@ -78,8 +78,9 @@ class Chain:
         self.rank = 0
         self._start(refinement=1)
 
-    def _start(self, refinement: int) -> None:
+    def _start(self, refinement: int, fewest: int = 1) -> None:
         self.refinement = refinement
+        self._fewest_steps = fewest
         self.blocks = Blocks(self.layout.block_features)
         self.means = Means(self.layout.mean_features)
         self.findings: Findings | None = None
@@ -108,7 +109,7 @@ class Chain:
         last = self._round_end
         return [
             RoundTask(
-                key=f"round-{self.variant}-{self.point}-{self.refinement}-{start}",
+                key=f"round-{self.variant}-{self.point}-{self.refinement}-{self._fewest_steps}-{start}",
                 variant=self.variant,
                 point=self.point,
                 priority=-self.rank,
@@ -117,6 +118,7 @@ class Chain:
                 count=min(size, last - start),
                 refinement=self.refinement,
                 steps=self.findings.steps if self.findings else None,
+                fewest=self._fewest_steps,
             )
             for start in range(first, last, size)
         ]
@@ -142,12 +144,16 @@ class Chain:
 
         Parts are added in the order of their realizations; one that comes early waits.
         """
-        given_up = self.final or task.refinement != self.refinement
+        ours = (self.refinement, self._fewest_steps)
+        given_up = self.final or (task.refinement, task.fewest) != ours
         if given_up or task.first < self.realizations:
             return []
         self._early[task.first] = outcome
         while (part := self._early.pop(self.realizations, None)) is not None:
             self._result = None
+            if part.outcome == "steps_too_long":
+                self._start(self.refinement, fewest=math.ceil(1.5 * part.steps))
+                return self.next_round()
             if part.outcome == "aliased" and self.refinement < MOST_REFINED:
                 self._start(2 * self.refinement)
                 return self.next_round()
@@ -212,6 +218,7 @@ class Chain:
         arrays = {
             "round_end": np.array(self._round_end),
             "refinement": np.array(self.refinement),
+            "fewest_steps": np.array(self._fewest_steps),
             "transforms": np.array(self.transforms),
             "outcome": np.array(self.outcome),
             "advice": np.array(self.advice),
@@ -235,7 +242,7 @@ class Chain:
         def under(prefix: str) -> dict[str, np.ndarray]:
             return {k.removeprefix(prefix): v for k, v in arrays.items() if k.startswith(prefix)}
 
-        self._start(int(arrays["refinement"]))
+        self._start(int(arrays["refinement"]), int(arrays["fewest_steps"]))
         self._round_end = int(arrays["round_end"])
         self.transforms = int(arrays["transforms"])
         self.outcome, self.advice = str(arrays["outcome"]), str(arrays["advice"])
@@ -310,7 +317,8 @@ class StudyState:
         if isinstance(task, MapTask):
             assert isinstance(outcome, MapPart)
             finer = 2 * task.refinement
-            if outcome.outcome == "aliased" and finer <= MOST_REFINED:
+            crowded = outcome.outcome in ("aliased", "steps_too_long")
+            if crowded and finer <= MOST_REFINED:
                 return [_map_task(task, 0, finer, None)]
             if outcome.field is None:
                 return []

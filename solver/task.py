@@ -25,13 +25,14 @@ class Task:
 @dataclass(frozen=True)
 class RoundTask(Task):
     """Realizations ``first`` to ``first + count − 1`` of a point, on a time step divided by
-    ``refinement``; ``steps`` is None in the first round, which finds them."""
+    ``refinement``; ``steps`` is None in the first round, which finds them, ``fewest`` or more."""
 
     kind: ClassVar[str] = "round"
     first: int
     count: int
     refinement: int
     steps: int | None
+    fewest: int = 1
 
 
 @dataclass(frozen=True)
@@ -59,6 +60,7 @@ class Findings:
 class RoundOutcome:
     """Features of a round's realizations, or the outcome that ended it early.
 
+    ``steps_too_long`` asks for the point to be begun again with more than ``steps`` steps.
     blocks: (realizations, block features); sums: (2, mean features).
     """
 
@@ -67,6 +69,7 @@ class RoundOutcome:
     blocks: Real = field(default_factory=lambda: np.zeros((0, 0)))
     sums: Real = field(default_factory=lambda: np.zeros((2, 0)))
     transforms: int = 0
+    steps: int = 0
     findings: Findings | None = None
 
 

@@ -14,7 +14,9 @@ from solver.kernels import band_energy, kerr_rotation, linear_flow
 from solver.schemes import Scheme
 from solver.transforms import COMPLEX, Transforms
 
-OutcomeKind = Literal["completed", "aliased", "non_finite", "under_resolved", "tolerance_not_met"]
+OutcomeKind = Literal[
+    "completed", "aliased", "non_finite", "under_resolved", "tolerance_not_met", "steps_too_long"
+]
 Observer = Callable[[int, Field], None]
 """Called with the index of a recorded distance and the field there."""
 
@@ -184,7 +186,7 @@ class Track:
         edge_limit: share of a realization's energy allowed at the edges of the band.
         guard: when positive, end the band where the splitting itself would make sidebands, for
         the long steps of an ensemble that are not checked one by one; the share of energy
-        allowed at such an end is edge_limit times this.
+        allowed at such an end is edge_limit times this, and ``steps_too_long`` the outcome of more.
 
         The Kerr turn that ends one step is put off until the next one, or until a phase is
         needed: it leaves all powers alone. An observer of fields, not of powers only, asks for
@@ -247,6 +249,8 @@ class Track:
                 z_km,
             )
         share = self.edge_share(spectrum, total, bins)
+        if share > edge_limit and 2 * bins < self.grid.samples:
+            return Outcome("steps_too_long", "take shorter steps", z_km)
         if share > edge_limit:
             return Outcome(
                 "aliased",

@@ -9,9 +9,10 @@ from typing import Any
 import numpy as np
 import pytest
 
+from solver.ensemble import Bench
 from solver.experiment import Study
 from solver.study import Chain, StudyState, execute
-from solver.task import MapTask, RoundTask, Task
+from solver.task import MapTask, RoundOutcome, RoundTask, Task
 
 BASE: dict[str, Any] = {
     "experiment": {
@@ -319,3 +320,34 @@ def test_the_live_map_moves_to_a_finer_time_step_rather_than_alias() -> None:
     # Levels of 255. A column is the mean of its samples, so on a finer time step it stands for a
     # moment a fraction of a sample later; another realization differs by some 80 levels.
     assert np.abs(preview - checked).mean() < 8.0
+
+
+def test_a_round_whose_steps_were_too_long_begins_again_with_more() -> None:
+    """On the same time step; what still comes of the round given up is not taken in."""
+    chain = Chain(_study(), 0, 0)
+    first = chain.next_round()[0]
+    again = chain.absorb(first, RoundOutcome("steps_too_long", "take shorter steps", steps=20))
+    assert [(task.first, task.fewest, task.refinement) for task in again] == [(0, 30, 1)]
+    assert chain.absorb(first, _round(first)) == []
+    assert chain.realizations == 0
+    outcome = _round(again[0])
+    assert outcome.steps >= 30
+    chain.absorb(again[0], outcome)
+    assert chain.realizations == again[0].count
+
+
+def _round(task: RoundTask) -> RoundOutcome:
+    outcome = execute(task)
+    assert isinstance(outcome, RoundOutcome)
+    return outcome
+
+
+def test_steps_that_end_the_band_within_the_light_say_so() -> None:
+    """Two steps of 12 km of Gaussian light: its spectrum reaches past where a step's phase is π."""
+    study = _study(span={"length_km": 24.0})
+    bench = Bench(study.experiment_at(0, 1), 1, [24.0])
+    fields = bench.fields(range(4))
+    *_, outcome = bench.run(fields, bench.pieces(2))
+    assert outcome.kind == "steps_too_long"
+    *_, outcome = bench.run(fields, bench.pieces(400))
+    assert outcome.kind == "completed"
