@@ -171,7 +171,7 @@ class Execution:
     def _news(self, state: StudyState, outcomes: list[Outcome]) -> News:
         """Summaries and map rows of what was just taken in, checkpoints set aside."""
         maps = []
-        changed = dict.fromkeys((task.variant, task.point) for task, _ in outcomes)
+        changed = dict.fromkeys(place for task, _ in outcomes for place in state.touched(task))
         for task, outcome in outcomes:
             rows = state.live_map_rows(task, outcome)
             if rows is not None:

@@ -18,6 +18,7 @@ import numpy as np
 
 from solver.experiment import NUMERICS, Study, numeric_parameters
 from solver.grid import Real
+from solver.pairing import Difference
 from solver.statistics import CORRELATIONS, ESTIMATES, SPECTRA, Estimate, Layout
 
 MAP_ROWS = 128
@@ -53,6 +54,7 @@ class LinearRegime:
 class PointResult:
     """Every estimate of one point of one curve, so far or for good.
 
+    difference: from the first variant at the same value of the sweep, common realizations only.
     estimates holds :data:`solver.statistics.ESTIMATES` by name; it is empty where the outcome
     is not ``completed``.
     """
@@ -71,6 +73,7 @@ class PointResult:
     length_km: float = 0.0
     estimates: Mapping[str, Estimate] = field(default_factory=dict)
     linear: LinearRegime | None = None
+    difference: Difference | None = None
     picture: Picture | None = None
 
     @property
@@ -92,6 +95,7 @@ class PointResult:
             "standard_error": central and _number(central[1]),
             "discretization_error": central and _number(self.discretization_error),
             "linear": linear and _number(linear.cross[len(linear.cross) // 2]),
+            "difference": self._difference(),
             "along": central and _pair(self.estimates["distance"]),
             "realizations": self.realizations,
             "target_met": self.target_met,
@@ -101,6 +105,11 @@ class PointResult:
             "has_map": self.picture is not None,
             "length_km": self.length_km,
         }
+
+    def _difference(self) -> dict[str, float | None] | None:
+        if self.difference is None:
+            return None
+        return {name: _number(value) for name, value in vars(self.difference).items()}
 
     def detail(self) -> dict[str, Any]:
         """Everything but the map; JSON-able."""
@@ -300,6 +309,8 @@ def _fill_point(group: h5py.Group, point: PointResult) -> None:
         linear = group.create_group("linear_regime")
         for name, values in vars(point.linear).items():
             linear.create_dataset(name, data=values).attrs["unit"] = "1"
+    if point.difference is not None:
+        group.create_group("difference_from_first").attrs.update(vars(point.difference))
     if point.picture is not None:
         made = group.create_dataset(
             "map", data=point.picture.data, compression="gzip", compression_opts=1
@@ -342,14 +353,19 @@ def _read_point(group: h5py.Group) -> PointResult:
         for name in ESTIMATES
         if name in group
     }
-    linear = picture = None
+    linear = picture = difference = None
+    if "difference_from_first" in group:
+        stored = {k: v.item() for k, v in group["difference_from_first"].attrs.items()}
+        difference = Difference(**stored)
     if "linear_regime" in group:
         stored = {name: values[()] for name, values in group["linear_regime"].items()}
         stored["moment_cross"] = float(stored["moment_cross"])
         linear = LinearRegime(**stored)
     if "map" in group:
         picture = Picture(group["map"][()], float(group["map"].attrs["intensity_scale_w"]))
-    return PointResult(**scalars, estimates=estimates, linear=linear, picture=picture)
+    return PointResult(
+        **scalars, estimates=estimates, linear=linear, difference=difference, picture=picture
+    )
 
 
 def curves_csv(result: StudyResult) -> str:
@@ -369,6 +385,8 @@ def curves_csv(result: StudyResult) -> str:
             "realizations",
             "target_met",
             "outcome",
+            "difference_from_first",
+            "difference_standard_error",
         ]
     )
     for point in result.found():
@@ -377,13 +395,16 @@ def curves_csv(result: StudyResult) -> str:
             [
                 result.study.variants[point.variant].name,
                 sweep["values"][point.point],
-                *(
-                    "" if (x := row[name]) is None else x
-                    for name in ("value", "standard_error", "discretization_error", "linear")
-                ),
+                *_cells(row, "value", "standard_error", "discretization_error", "linear"),
                 row["realizations"],
                 "yes" if row["target_met"] else "no",
                 row["outcome"],
+                *_cells(row["difference"] or {}, "value", "standard_error"),
             ]
         )
     return out.getvalue()
+
+
+def _cells(row: Mapping[str, Any], *names: str) -> list[Any]:
+    """Values of a row for a table, empty where there is none."""
+    return ["" if row.get(name) is None else row[name] for name in names]

@@ -14,6 +14,7 @@ import numpy as np
 
 from solver.experiment import Study
 from solver.grid import Field
+from solver.pairing import difference
 from solver.result import LinearRegime, Picture, PointResult, StudyResult
 from solver.statistics import Blocks, Estimators, Layout, Means, last_central
 from solver.task import Findings, MapPart, MapTask, RoundOutcome, RoundTask, Task
@@ -354,7 +355,16 @@ class StudyState:
 
     def point(self, variant: int, point: int) -> PointResult | None:
         """What has been found of a point so far; None before anything has."""
-        return self.chains[variant, point].result()
+        chain, first = self.chains[variant, point], self.chains[0, point]
+        found = chain.result()
+        if found is None or chain is first or not (chain.findings and first.findings):
+            return found
+        return replace(found, difference=difference(chain.layout, chain.blocks, first.blocks))
+
+    def touched(self, task: Task) -> list[tuple[int, int]]:
+        """The (variant, point) whose results an outcome of the task may have changed."""
+        others = range(len(self.study.variants)) if task.variant == 0 else [task.variant]
+        return [(variant, task.point) for variant in others]
 
     def checkpoint(self, variant: int, point: int) -> dict[str, np.ndarray] | None:
         """A point's state so far, as arrays; None before anything was taken in."""

@@ -27,6 +27,7 @@ DOWNWARD = [
     "track",
     "propagation",
     "statistics",
+    "pairing",
     "result",
     "task",
     "ensemble",

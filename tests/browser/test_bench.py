@@ -285,6 +285,20 @@ def test_the_curve_over_power_and_distance_at_once(page: Page, lab: LiveServer, 
     )
 
 
+def test_the_difference_from_the_first_variant(page: Page, lab: LiveServer, done: str) -> None:
+    page.goto(f"/runs/{done}")
+    wait_for_state(page, "Done")
+    page.locator("[data-differences] > summary").click()
+    page.locator('[data-plot="difference"]').scroll_into_view_if_needed()
+    first, second = lab.get(f"/api/runs/{done}/view")["points"]
+    drawn = wait_for_values(page, "difference", "uncoupled", 2)
+    assert drawn == [point["difference"]["value"] for point in second]
+    for value, one, other in zip(drawn, second, first, strict=True):
+        assert other["difference"] is None
+        if one["realizations"] == other["realizations"] == one["difference"]["realizations"]:
+            assert value == pytest.approx(one["value"] - other["value"], abs=1e-6)
+
+
 def test_a_page_survives_the_server_being_killed_and_started_again(
     context: BrowserContext, watch: Watch, own_server: LiveServer
 ) -> None:

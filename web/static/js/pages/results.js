@@ -29,12 +29,14 @@ export class Results {
     this.maps = [0, 1, 2].map((plane) => new EvolutionPlot(box(`map-${plane}`), plane, readout));
     for (const map of this.maps) map.zoomed = (change) => this.#zoomTogether(map, change);
     this.plots = { dip: new Surface(box("dip"), { intervalMs: 300 }) };
-    for (const key of ["cross", "auto", "spectra", "distance", "contrast", "durations", "overview"]) {
+    for (const key of ["cross", "auto", "spectra", "distance", "contrast", "durations", "overview", "difference"]) {
       this.plots[key] = new Surface(box(key), { intervalMs: 500 });
     }
     this.legend = new Legend(find(root, "legend"), () => this.#comparisonChanged());
     this.selection = new Selection(root, () => this.#selectionChanged());
     powerUnit.addEventListener("change", () => this.#run && this.#drawAll());
+    this.differences = find(root, "differences");
+    this.differences.addEventListener("toggle", () => this.#run && this.#drawDifferences());
     this.overview = find(root, "overview");
     this.overview.addEventListener("toggle", () => {
       if (this.#run) this.#drawOverview();
@@ -78,6 +80,7 @@ export class Results {
     } else if (type === "point") {
       if (this.selection.following) this.#followCurve();
       this.#drawDip();
+      this.#drawDifferences();
       this.#drawOverview();
       this.#details.stale();
       if (changed.some(({ has_map: has }) => has)) this.#drawMaps();
@@ -110,6 +113,7 @@ export class Results {
 
   #selectionChanged() {
     this.#drawDip();
+    this.#drawDifferences();
     this.#drawOverview();
     this.#drawMaps();
     this.#drawPoint();
@@ -120,6 +124,7 @@ export class Results {
     this.selection.hidden = this.legend.hidden;
     this.selection.remember();
     this.#drawDip();
+    this.#drawDifferences();
     this.#drawPoint();
     this.#wantDetails();
   }
@@ -129,6 +134,7 @@ export class Results {
     this.#drawMaps();
     this.#drawDip();
     this.#drawPoint();
+    this.#drawDifferences();
     this.#drawOverview();
     this.#wantDetails();
     this.#tables();
@@ -170,6 +176,31 @@ export class Results {
     const where = atEnd ? "" : ` at ${brief(km)} km`;
     this.#note("dip", `at ${brief(km)} km`);
     this.plots.dip.draw(() => dipFigure({ curves, sweep, mark: sweep.values[point], where }));
+  }
+
+  /** Each variant minus the first, with the standard error of the difference itself. */
+  #drawDifferences() {
+    const { sweep } = this;
+    const [first] = this.#run.variants;
+    this.differences.hidden = this.#run.variants.length < 2;
+    if (!this.differences.open || this.differences.hidden) return;
+    const curves = this.#shownVariants().filter((variant) => variant > 0).map((variant) => ({
+      name: this.#run.variants[variant].name,
+      index: variant,
+      x: sweep.values,
+      points: sweep.values.map((_, point) => this.#differenceAt(variant, point)),
+    }));
+    this.#note("difference", `from ${first.name}, at the end of the line`);
+    const where = ` − C12(0) of ${first.name}`;
+    this.plots.difference.draw(() => dipFigure({ curves, sweep, mark: sweep.values[this.selection.point], where }));
+  }
+
+  /** A paired difference in the shape of a summary; null where there is none yet. */
+  #differenceAt(variant, point) {
+    const own = this.#run.summary(variant, point);
+    if (!own?.difference) return null;
+    const first = this.#run.summary(0, point);
+    return { ...own, ...own.difference, discretization_error: null, linear: own.linear - first.linear };
   }
 
   #drawMaps() {
