@@ -62,8 +62,16 @@ def _parser() -> argparse.ArgumentParser:
 def _add_engine_flags(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--workers", help="worker processes (one for each usable core)")
     parser.add_argument(
-        "--cluster", metavar="ADDRESS", help="use the Dask scheduler at this address instead"
+        "--cluster",
+        metavar="ADDRESS",
+        help="use the Dask scheduler at this address instead, tcp://HOST:PORT or tls://HOST:PORT",
     )
+    for name, what in (
+        ("ca", "certificate of the authority"),
+        ("certificate", "this machine's certificate"),
+        ("key", "its private key"),
+    ):
+        parser.add_argument(f"--cluster-{name}", metavar="FILE", help=f"for tls://: {what}, PEM")
 
 
 def main(arguments: list[str] | None = None) -> int:

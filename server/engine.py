@@ -2,7 +2,8 @@
 
 By default the engine starts its own cluster: single-threaded worker processes on loopback,
 reached through temporary TLS credentials so that nobody else on the machine can submit code.
-With an address it joins a scheduler anywhere instead, and comes back when that one does.
+With an address it joins a scheduler anywhere instead, and comes back when that one does; there
+only workers of the same version are given tasks.
 """
 
 import asyncio
@@ -11,11 +12,13 @@ import contextlib
 import itertools
 import logging
 import os
-from collections.abc import Callable
+from collections.abc import Callable, Iterable
 from pathlib import Path
 from typing import Any, Literal
 
 from server.errors import ServerError
+from server.settings import Cluster
+from server.worker import OFFER, offer, under_way
 
 Condition = Literal["starting", "ready", "lost"]
 
@@ -24,6 +27,7 @@ _counter = itertools.count()
 _THREAD_CAPS = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "NUMBA_NUM_THREADS")
 _WATCH_INTERVAL_S = 0.5
 _RETRY_INTERVAL_S = 2.0
+_PATIENCE_S = 2.0
 
 
 class EngineError(ServerError):
@@ -36,26 +40,31 @@ class EngineError(ServerError):
 class Engine:
     """Runs pure functions on worker processes; survives losing a worker or the scheduler."""
 
-    def __init__(self, workers: int, scratch: Path, cluster: str = "") -> None:
+    def __init__(self, workers: int, scratch: Path, cluster: Cluster | None = None) -> None:
         self._wanted_workers = workers
         self._scratch = scratch
-        self._address = cluster
+        self._foreign = cluster or Cluster()
         self._cluster: Any = None
         self._client: Any = None
         self._ready = asyncio.Event()
         self._keeper: asyncio.Task[None] | None = None
-        self._foreign_workers = 0
+        self._chases: set[asyncio.Task[None]] = set()
+        self._present: set[str] = set()
+        self._accepted: set[str] = set()
+        self._accepted_once = False
+        self._refusal = ""
+        self._trouble = ""
         self.condition: Condition = "starting"
         self.tasks_done = 0
 
     @property
     def workers(self) -> int:
-        """Worker processes present now."""
+        """Worker processes present now; on a foreign cluster, those that may be used."""
         if self._client is None or not self._ready.is_set():
             return 0
         if self._cluster is not None:
             return len(self._cluster.scheduler.workers)
-        return self._foreign_workers
+        return len(self._accepted)
 
     def start(self, warm: Callable[[], object] | None = None) -> None:
         """Bring the workers up in the background; ``warm`` is run once on each of them."""
@@ -64,6 +73,8 @@ class Engine:
     async def stop(self) -> None:
         """End the workers this engine started; a foreign cluster is only left."""
         self._ready.clear()
+        for chase in self._chases:
+            chase.cancel()
         if self._keeper is not None:
             self._keeper.cancel()
             with contextlib.suppress(asyncio.CancelledError):
@@ -82,18 +93,25 @@ class Engine:
         """The function's value, computed by some worker; larger priorities go first.
 
         The function must be pure: it is executed again when a worker or the scheduler is lost.
-        Cancelling the caller withdraws the task.
+        Cancelling the caller withdraws the task, and ends one of our own workers that goes on
+        with it nevertheless. Raises EngineError when no worker may take it or every one dies of
+        it, and what the function raises.
         """
+        # A foreign scheduler may hold workers of any version: it is told which will do.
+        needs = {offer(): 1} if self._foreign.address else None
         while True:
             await self._ready.wait()
+            if self._refusal:
+                raise EngineError(self._refusal)
             client = self._client
             future = client.submit(
                 function, *args, key=f"crossdip-{next(_counter)}-{os.getpid()}",
-                priority=priority, pure=False,
+                priority=priority, pure=False, resources=needs,
             )  # fmt: skip
             try:
                 value = await future
             except asyncio.CancelledError:
+                self._chase(future.key)
                 raise
             except (concurrent.futures.CancelledError, OSError) as error:
                 if isinstance(error, OSError) and client.status == "running":
@@ -114,6 +132,23 @@ class Engine:
                 # Dropping the last reference is what cancels a task that has not begun.
                 future.release()
 
+    def _chase(self, key: str) -> None:
+        """Look after a cancelled task that one of our own workers may have begun."""
+        task = self._cluster and self._cluster.scheduler.tasks.get(key)
+        if task and task.processing_on and self._ready.is_set():
+            chase = asyncio.create_task(self._end(key, task.processing_on.address))
+            self._chases.add(chase)
+            chase.add_done_callback(self._chases.discard)
+
+    async def _end(self, key: str, address: str) -> None:
+        """Start a worker afresh when it is still busy with a task nobody wants any more."""
+        await asyncio.sleep(_PATIENCE_S)
+        # A worker that is gone by then has ended the task too.
+        with contextlib.suppress(Exception):
+            keys = await self._client.run(under_way, workers=[address])
+            if key in keys[address]:
+                await self._client.restart_workers([address])
+
     async def _keep(self, warm: Callable[[], object] | None) -> None:
         """Connect, watch, connect again, until stopped."""
         while True:
@@ -122,10 +157,11 @@ class Engine:
             except asyncio.CancelledError:
                 raise
             except Exception as error:
-                if not self._address:
+                if not self._foreign.address:
                     _log.exception("the local workers did not start")
-                else:
-                    _log.warning("no scheduler at %s: %s", self._address, error)
+                elif str(error) != self._trouble:
+                    self._trouble = str(error)
+                    _log.warning("no scheduler at %s yet: %s", self._foreign.address, error)
                 self.condition = "lost"
                 with contextlib.suppress(Exception):
                     await self._disconnect()
@@ -135,10 +171,10 @@ class Engine:
                 connected = self._client.status == "running"
                 self.condition = "ready" if connected else "lost"
                 if connected:
-                    self._ready.set()
                     if self._cluster is None:
                         with contextlib.suppress(OSError):
-                            self._foreign_workers = len(await self._client.ncores())
+                            await self._survey()
+                    self._ready.set()
                 else:
                     self._ready.clear()
                 await asyncio.sleep(_WATCH_INTERVAL_S)
@@ -152,20 +188,49 @@ class Engine:
             os.environ.setdefault(name, "1")
         # The import takes a third of a second: the page is served meanwhile.
         distributed = await asyncio.to_thread(_load)
-        if self._address:
+        if self._foreign.address:
             self._client = await distributed.Client(
-                self._address, asynchronous=True, set_as_default=False, timeout=5
+                self._foreign.address,
+                security=_security(distributed, self._foreign),
+                asynchronous=True,
+                set_as_default=False,
+                timeout=5,
             )
+            self._trouble = ""
+            self._present, self._accepted = set(), set()
+            await self._survey()
         else:
             if self._cluster is None:
                 self._cluster = await self._local_cluster(distributed)
             self._client = await distributed.Client(
                 self._cluster, asynchronous=True, set_as_default=False
             )
-        if warm is not None and not self._address:
+        if warm is not None and not self._foreign.address:
             await self._warm(warm)
         self.condition = "ready"
         self._ready.set()
+
+    async def _survey(self) -> None:
+        """See which workers of a foreign cluster may be used; tell of any other one once."""
+        present = set(await self._client.ncores())
+        if present == self._present:
+            return
+        identity = await self._client.scheduler.identity(n_workers=-1)
+        workers = identity["workers"]
+        reasons = {
+            address: reason
+            for address, worker in workers.items()
+            if (reason := _objection(address, worker["resources"]))
+        }
+        for address in reasons.keys() - self._present:
+            _log.warning("%s", reasons[address])
+        self._present = present
+        self._accepted = workers.keys() - reasons.keys()
+        # Good workers that were there before may come back; without any, nobody would be told.
+        if self._accepted:
+            self._refusal, self._accepted_once = "", True
+        elif not self._accepted_once:
+            self._refusal = next(iter(reasons.values()), "")
 
     async def _local_cluster(self, distributed: Any) -> Any:
         import dask
@@ -217,6 +282,33 @@ class Engine:
         client, self._client = self._client, None
         if client is not None:
             await client.close()
+
+
+def _objection(address: str, resources: Iterable[str]) -> str:
+    """Why a worker of a foreign cluster gets no tasks; empty when it does."""
+    offers = [name for name in resources if name.startswith(OFFER)]
+    if offer() in offers:
+        return ""
+    if not offers:
+        return (
+            f"the worker {address} does not say which version of Crossdip it has, and this is "
+            f"{offer()}: install this version there and start it with --preload server.worker"
+        )
+    return (
+        f"the worker {address} has {offers[0]}, but this is {offer()}: "
+        "install the same version on both machines, then start that worker again"
+    )
+
+
+def _security(distributed: Any, cluster: Cluster) -> Any:
+    if cluster.ca is None:
+        return None
+    return distributed.Security(
+        tls_ca_file=str(cluster.ca),
+        tls_client_cert=str(cluster.certificate),
+        tls_client_key=str(cluster.key),
+        require_encryption=True,
+    )
 
 
 def _load() -> Any:

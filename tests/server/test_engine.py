@@ -13,6 +13,7 @@ from pathlib import Path
 import pytest
 
 from server.engine import Engine
+from server.settings import Cluster
 from tests.asynchronous import run
 from tests.doubling import double_slowly
 
@@ -34,7 +35,8 @@ def _scheduler(port: int) -> Iterator[None]:
         "async def main():\n"
         f"    async with distributed.Scheduler(host='127.0.0.1', port={port},\n"
         "            dashboard=False, dashboard_address='127.0.0.1:0') as scheduler:\n"
-        "        async with distributed.Worker(scheduler.address, nthreads=1):\n"
+        "        async with distributed.Worker(scheduler.address, nthreads=1,\n"
+        "                preload=['server.worker']):\n"
         "            print('up', flush=True)\n"
         "            await scheduler.finished()\n"
         "asyncio.run(main())\n"
@@ -74,7 +76,7 @@ def test_a_scheduler_that_comes_back_gets_the_pending_tasks_again(tmp_path: Path
     port = _free_port()
 
     async def check() -> None:
-        engine = Engine(1, tmp_path, f"tcp://127.0.0.1:{port}")
+        engine = Engine(1, tmp_path, Cluster(f"tcp://127.0.0.1:{port}"))
         engine.start()
         tasks = [asyncio.create_task(engine.run(double_slowly, number)) for number in range(100)]
         with _scheduler(port):
