@@ -28,6 +28,7 @@ _THREAD_CAPS = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "N
 _WATCH_INTERVAL_S = 0.5
 _RETRY_INTERVAL_S = 2.0
 _PATIENCE_S = 2.0
+_KILLING_S = 0.2
 
 
 class EngineError(ServerError):
@@ -146,8 +147,12 @@ class Engine:
         # A worker that is gone by then has ended the task too.
         with contextlib.suppress(Exception):
             keys = await self._client.run(under_way, workers=[address])
-            if key in keys[address]:
-                await self._client.restart_workers([address])
+            if key not in keys[address]:
+                return
+            for nanny in self._cluster.workers.values():
+                if nanny.worker_address == address:
+                    # The nanny starts another process when this one is gone.
+                    await nanny.kill(timeout=_KILLING_S, reason="a task that was cancelled")
 
     async def _keep(self, warm: Callable[[], object] | None) -> None:
         """Connect, watch, connect again, until stopped."""
