@@ -1,160 +1,50 @@
-"""``crossdip bench``: what this machine does, measured in one run on a server of its own.
+"""``crossdip bench``: what this machine does, measured in one run on servers of its own.
 
 Every row is what was measured, the figure, and the goal it is held against. Figures of speed
 mean something only beside others of the same run on the same machine.
 """
 
 import argparse
-import http.client
-import json
 import os
 import platform
 import secrets
-import subprocess
-import sys
-import tempfile
-import threading
 import time
-from collections.abc import Iterator
-from contextlib import contextmanager
-from dataclasses import dataclass, field
+from pathlib import Path
 from typing import Any
 
 import psutil
 
+from server.measuring import Served, Timing, served
 from server.settings import usable_cores
-from solver.experiment import Study
+from solver.experiment import Precision, Study
+from solver.result import StudyResult
 
-SAMPLING_S = 0.05
-PATIENCE_S = 600
-
-
-class Watch(threading.Thread):
-    """Peak memory and processor time of a server and its workers, sampled while it runs."""
-
-    def __init__(self, pid: int) -> None:
-        super().__init__(daemon=True)
-        self._server = psutil.Process(pid)
-        self._done = threading.Event()
-        self.peak_bytes: dict[str, int] = {"server": 0, "workers": 0}
-
-    def run(self) -> None:
-        while not self._done.wait(SAMPLING_S):
-            self.sample()
-
-    def sample(self) -> None:
-        """Take the memory of now into the peaks."""
-        try:
-            workers = self._server.children(recursive=True)
-            now = {
-                "server": self._server.memory_info().rss,
-                "workers": max((p.memory_info().rss for p in workers), default=0),
-            }
-        except psutil.Error:
-            return  # a process ended between being listed and being read
-        self.peak_bytes = {name: max(self.peak_bytes[name], now[name]) for name in now}
-
-    def cpu_s(self) -> float:
-        """Processor time used so far by the server and every process under it."""
-        family = [self._server, *self._server.children(recursive=True)]
-        return float(sum(sum(process.cpu_times()[:2]) for process in family))
-
-    def stop(self) -> None:
-        """End the sampling."""
-        self._done.set()
-        self.join()
+TIMED_REALIZATIONS = 2
+"""Realizations of each point on which the plain script is timed."""
+MIDDLE_MW, HIGH_MW = 200.0, 500.0
+FINE = 1e-6
 
 
-@dataclass
-class Timing:
-    """When things first happened, in seconds after the POST."""
-
-    first_s: dict[str, float] = field(default_factory=dict)
-    end_s: float = 0.0
-    cpu_s: float = 0.0
-    points: int = 0
+def _row(what: str, figure: str, goal: str = "") -> None:
+    print(f"{what:<72} {figure:>12}  {goal}".rstrip(), flush=True)
 
 
-class Served:
-    """A running server, spoken to over HTTP."""
-
-    def __init__(self, port: int, pid: int) -> None:
-        self._port = port
-        self.watch = Watch(pid)
-
-    def request(self, method: str, path: str, body: object = None) -> Any:
-        """The JSON of an answer; raises RuntimeError when it is an error."""
-        connection = http.client.HTTPConnection("127.0.0.1", self._port, timeout=PATIENCE_S)
-        try:
-            text = None if body is None else json.dumps(body)
-            connection.request(method, path, text, {"Content-Type": "application/json"})
-            answer = connection.getresponse()
-            content = answer.read()
-            if answer.status >= 400:
-                raise RuntimeError(f"{method} {path} answered {answer.status}: {content!r}")
-            return json.loads(content) if "json" in answer.headers["Content-Type"] else content
-        finally:
-            connection.close()
-
-    def events(self, path: str) -> Iterator[str]:
-        """The names of the events of a stream as they come, until it ends."""
-        connection = http.client.HTTPConnection("127.0.0.1", self._port, timeout=PATIENCE_S)
-        try:
-            connection.request("GET", path)
-            for line in connection.getresponse():
-                if line.startswith(b"event:"):
-                    yield line[6:].strip().decode()
-        finally:
-            connection.close()
-
-    def time(self, study: dict[str, Any]) -> Timing:
-        """Post a study and follow it to its end."""
-        timing = Timing()
-        cpu_s, start_s = self.watch.cpu_s(), time.perf_counter()
-        run = self.request("POST", "/api/runs", study)
-        for event in self.events(f"/api/runs/{run['id']}/events"):
-            timing.end_s = time.perf_counter() - start_s
-            timing.first_s.setdefault(event, timing.end_s)
-        timing.cpu_s = self.watch.cpu_s() - cpu_s
-        state = self.request("GET", f"/api/runs/{run['id']}")
-        if state["state"] != "done":
-            raise RuntimeError(f"the run ended {state['state']}: {state['message']}")
-        timing.points = state["progress"]["points_done"]
-        return timing
+def _note(words: str) -> None:
+    print(f"  {words}", flush=True)
 
 
-@contextmanager
-def served(workers: int) -> Iterator[tuple[Served, float]]:
-    """A server on a free port and a folder of its own, and the time until it was ready, s."""
-    with tempfile.TemporaryDirectory(prefix="crossdip-bench-") as folder:
-        command = [sys.executable, "-m", "server", "serve", "--port", "0", "--data", folder]
-        start_s = time.perf_counter()
-        with subprocess.Popen(
-            [*command, "--workers", str(workers)], stdout=subprocess.PIPE, text=True
-        ) as process:
-            assert process.stdout is not None
-            line = process.stdout.readline()
-            try:
-                port = int(line.rsplit(":", 1)[1].strip().strip("/"))
-                server = Served(port, process.pid)
-                while server.request("GET", "/healthz")["engine"] != "ready":
-                    time.sleep(SAMPLING_S)
-                ready_s = time.perf_counter() - start_s
-                server.watch.start()
-                yield server, ready_s
-                server.watch.stop()
-            finally:
-                process.terminate()
+def _load() -> str:
+    return ", ".join(f"{x:.1f}" for x in psutil.getloadavg())
 
 
-def _fresh(study: dict[str, Any]) -> dict[str, Any]:
-    """The study with a seed nobody has used, so that it is computed and not looked up."""
-    study["experiment"]["ensemble"]["seed"] = secrets.randbelow(2**50)
+def _headline_study(seed: int) -> dict[str, Any]:
+    study = Study().model_dump(mode="json")
+    study["experiment"]["ensemble"]["seed"] = seed
     return study
 
 
 def _growth_study(realizations: int) -> dict[str, Any]:
-    study = Study().model_dump(mode="json")
+    study = _headline_study(secrets.randbelow(2**50))
     study["experiment"]["ensemble"].update(
         samples=1024,
         window_ps=4096.0,
@@ -163,54 +53,186 @@ def _growth_study(realizations: int) -> dict[str, Any]:
         max_realizations=realizations,
     )
     study["sweep"].update(points=2)
-    return _fresh(study)
+    return study
 
 
-def _row(what: str, figure: str, goal: str = "") -> None:
-    print(f"{what:<58} {figure:>12}  {goal}", flush=True)
-
-
-def _headline(server: Served, workers: int) -> None:
-    timing = server.time(_fresh(Study().model_dump(mode="json")))
+def _headline(server: Served, workers: int, seed: int) -> Timing:
+    timing = server.time(_headline_study(seed))
     busy = timing.cpu_s / timing.end_s / workers
-    _row("headline study, POST to the end of its stream", f"{timing.end_s:.2f} s", "10 s, later 3")
+    _row("headline study, POST to the end of its stream", f"{timing.end_s:.2f} s", "3 s")
     _row("  to the first map row", f"{timing.first_s['map']:.2f} s", "0.5 s")
-    _row("  to the first curve point", f"{timing.first_s['point']:.2f} s", "1 s")
+    _row("  to the first curve point", f"{timing.first_s['point']:.2f} s", "0.5 s")
     _row("  points", f"{timing.points}")
-    _row("  core use, processes of the server over cores given", f"{100 * busy:.0f} %", "85 %")
+    _row("  core use, processes of the server over cores given", f"{100 * busy:.0f} %", "90 %")
+    return timing
 
 
 def _memory(server: Served) -> None:
     megabytes = {name: size / 2**20 for name, size in server.watch.peak_bytes.items()}
-    _row("peak memory of the server", f"{megabytes['server']:.0f} MB")
-    _row("peak memory of the largest worker", f"{megabytes['workers']:.0f} MB")
+    _row("  peak memory of the server", f"{megabytes['server']:.0f} MB")
+    _row("  peak memory of the largest worker", f"{megabytes['workers']:.0f} MB")
 
 
-def _growth(workers: int) -> None:
-    """Memory after few and after many realizations, each on a server of its own."""
-    for realizations in (256, 4096):
-        with served(workers) as (server, _):
-            timing = server.time(_growth_study(realizations))
+def _against_plain_study(result: StudyResult, timing: Timing) -> None:
+    from server import yardstick
+
+    plain = yardstick.plain_script()
+    if plain is None:
+        _note("tests/benchmarks/plain.py is not here: run from the source tree to compare with it")
+        return
+    script = yardstick.plain_study(plain, result, TIMED_REALIZATIONS)
+    found = [point for curve in result.points for point in curve if point is not None]
+    realizations = sum(point.realizations for point in found)
+    worst = max(point.discretization_error for point in found)
+    _row("plain script, the same study on one core", f"{script.cpu_s:.1f} s")
+    _note(
+        f"timed on {TIMED_REALIZATIONS} realizations of each point, scaled to the {realizations} "
+        "that the study used,"
+    )
+    _note(
+        f"so equal standard errors; field error {yardstick.PLAIN_ERROR:g}, {script.fewest_steps} "
+        f"to {script.most_steps} steps, search not charged"
+    )
+    ratio = script.cpu_s / timing.end_s
+    _row("headline study against the plain script, wall time", f"{ratio:.0f} ×", "25 ×, aim 50")
+    ratio = script.cpu_s / timing.cpu_s
+    _row("  processor time, all of the server's against the script's", f"{ratio:.0f} ×")
+    _row("  largest discretization error on C12(0)", f"{worst:.1e}", "1e-3")
+
+
+def _one_core() -> None:
+    from server import yardstick
+
+    plain = yardstick.plain_script()
+    if plain is not None:
+        one = yardstick.single_propagation(plain, MIDDLE_MW, FINE)
+        what = f"one field at {FINE:g}, double, {MIDDLE_MW:g} mW, against the plain script"
+        _row(what, f"{one.plain_s / one.solver_s:.1f} ×", "8 ×, aim 15")
+        _note(
+            f"{one.samples} samples: {one.solver_s:.3f} s, trial runs included, against "
+            f"{one.plain_s:.3f} s in {one.plain_steps} steps, search not charged;"
+        )
+        _note(
+            f"errors {one.error:.1e} and {one.plain_error:.1e}, the two fields {one.apart:.1e} "
+            "apart"
+        )
+    asked: list[tuple[float, Precision]] = [(FINE, "double"), (1e-3, "single")]
+    for tolerance, precision in asked:
+        ratio, count = yardstick.over_transforms(MIDDLE_MW, tolerance, precision)
+        what = f"propagation over its {count} bare transforms, {precision}, {tolerance:g}"
+        _row(what, f"{ratio:.2f}", "1.25, aim 1.15")
+    ratio = yardstick.round_over_transforms(HIGH_MW)
+    _row(f"task of a study at {HIGH_MW:g} mW, with draws and estimators, over them", f"{ratio:.2f}")
+
+
+def _against_uniform() -> None:
+    """Transforms of an ensemble's steps against the best uniform ones that err as much."""
+    from server import yardstick
+    from solver.schemes import FOURTH_ORDER, SECOND_ORDER
+
+    parts = Study().experiment.ensemble.distances
+    ladder = yardstick.Ladder(MIDDLE_MW, 1, FOURTH_ORDER, 1024)
+    uniform = [
+        ladder.rungs(SECOND_ORDER, "double", [8 * 2**n for n in range(6)]),
+        ladder.rungs(FOURTH_ORDER, "double", [4 * 2**n for n in range(7)]),
+    ]
+    for scheme, steps in ((SECOND_ORDER, 4 * parts), (FOURTH_ORDER, 3 * parts)):
+        (ours,) = ladder.rungs(scheme, "double", [steps], parts)
+        best = min(yardstick.transforms_at(ours.error, rungs) for rungs in uniform)
+        what = f"transforms over those of the best uniform steps at error {ours.error:.0e}"
+        _row(what, f"{ours.transforms / best:.2f}", "1")
+
+
+def _growth(workers: int, headline: Timing, seed: int, full: bool) -> None:
+    from server import yardstick
+
+    print("\nGrowth")
+    exponents = [11, 13, 15, 17, *([19, 20] if full else [])]
+    first: float | None = None
+    for exponent in exponents:
+        samples = 2**exponent
+        taken_s = yardstick.step_s(samples, steps=16)
+        per = taken_s / (samples * exponent)
+        first = per if first is None else first
+        _row(f"step of 2^{exponent} samples", f"{1e3 * taken_s:.3f} ms")
+        _row("  per N log N, in that of the smallest", f"{per / first:.2f}", "1")
+    counts = (128, 4096 if full else 512)
+    with served(workers) as (server, _):
+        times = []
+        for count in counts:
+            times.append(server.time(_growth_study(count)))
             server.watch.sample()
-            print(f"{realizations} realizations of each of 6 points, {timing.end_s:.1f} s:")
+            _row(f"{count} realizations of each of 6 points", f"{times[-1].end_s:.2f} s")
             _memory(server)
+    ratio = times[1].cpu_s / times[0].cpu_s / (counts[1] / counts[0])
+    _row("  processor time per realization, in that of the fewest", f"{ratio:.2f}", "1")
+    if workers == 1:
+        return
+    with served(1) as (server, _):
+        alone = server.time(_headline_study(seed))
+    _row("headline study on one worker", f"{alone.end_s:.2f} s")
+    efficiency = alone.end_s / headline.end_s / workers
+    _row(f"  efficiency of {workers} workers", f"{100 * efficiency:.0f} %", "85 % at 2")
+    more = headline.cpu_s / alone.cpu_s
+    _row(f"  processor time of {workers} workers, in that of one", f"{more:.2f}", "1")
+
+
+def _diagram(path: Path) -> None:
+    from server import yardstick
+    from server.diagram import drawn
+    from solver.propagation import scheme_for
+    from solver.schemes import FOURTH_ORDER, SECOND_ORDER
+
+    ladder = yardstick.Ladder(MIDDLE_MW, 2, FOURTH_ORDER, 4096)
+    curves = {
+        "second order, double": ladder.rungs(
+            SECOND_ORDER, "double", [16 * 2**n for n in range(10)]
+        ),
+        "fourth order, double": ladder.rungs(FOURTH_ORDER, "double", [4 * 2**n for n in range(9)]),
+        "second order, single": ladder.rungs(SECOND_ORDER, "single", [16 * 2**n for n in range(6)]),
+    }
+    plain = yardstick.plain_script()
+    if plain is not None:
+        curves["plain script"] = ladder.plain_rungs(plain, [16 * 2**n for n in range(9)])
+    tolerances = [10 ** (-n / 20) for n in range(20, 160)]
+    switch = min(tolerance for tolerance in tolerances if scheme_for(tolerance).order == 2)
+    text = drawn(
+        f"Work and precision: one realization at {MIDDLE_MW:g} mW, headline fibre, one core",
+        {name: [(r.transforms, r.error) for r in rungs] for name, rungs in curves.items()},
+        {name: [(1e3 * r.cpu_s, r.error) for r in rungs] for name, rungs in curves.items()},
+        switch,
+    )
+    path.write_text(text, encoding="utf-8")
+    _row("work–precision diagram", str(path))
 
 
 def main(arguments: list[str]) -> int:
     """Measure and print; exit status."""
     parser = argparse.ArgumentParser(prog="crossdip bench", description=__doc__)
-    parser.add_argument("--workers", type=int, default=usable_cores())
+    parser.add_argument("--workers", type=int, default=usable_cores(), help="worker processes")
     parser.add_argument("--repeat", type=int, default=2, help="headline runs (2)")
-    parser.add_argument("--growth", action="store_true", help="also measure memory against length")
+    parser.add_argument("--full", action="store_true", help="grow to 2^20 samples and further")
+    parser.add_argument("--diagram", type=Path, metavar="FILE.svg", help="draw work and precision")
     given = parser.parse_args(arguments)
+    start_s = time.monotonic()
     print(f"{platform.machine()}, {os.cpu_count()} cores, Python {platform.python_version()}")
-    print(f"{given.workers} workers\n")
+    print(f"{given.workers} workers; load average at the start {_load()}\n")
     with served(given.workers) as (server, ready_s):
-        _row("crossdip serve typed, to workers warm", f"{ready_s:.2f} s")
+        _row("crossdip serve typed, to workers warm", f"{ready_s:.2f} s", "4 s")
+        timings = []
         for _ in range(given.repeat):
-            _headline(server, given.workers)
+            seed = secrets.randbelow(2**50)
+            timings.append((_headline(server, given.workers, seed), seed))
+        best, seed = min(timings, key=lambda pair: pair[0].end_s)
+        result = server.result(best.run)
         _memory(server)
-    if given.growth:
+    print("\nAgainst the plain script and against the limit, one core, processor time")
+    _against_plain_study(result, best)
+    _one_core()
+    _against_uniform()
+    _growth(given.workers, best, seed, given.full)
+    if given.diagram is not None:
         print()
-        _growth(given.workers)
+        _diagram(given.diagram)
+    print(f"\n{time.monotonic() - start_s:.0f} s; load average at the end {_load()}")
     return 0
