@@ -130,7 +130,7 @@ def resolved_line(
 ) -> Line:
     """A line whose window has as many samples as the tolerance needs."""
     for refinement in (1, 2, 4, 8):
-        experiment = at_power(power_mw)
+        experiment = at_power(power_mw, precision=precision)
         bench = Bench(experiment, refinement, ())
         line = Line(experiment, bench.fields(range(realizations)), bench.grid.time_step_ps)
         if line.propagate(tolerance, precision).outcome.kind == "completed":
@@ -226,7 +226,7 @@ class Ladder:
     """Runs of one field down one line with ever more steps, held against a very fine one."""
 
     def __init__(self, power_mw: float, refinement: int, finest: Scheme, finest_steps: int):
-        self._bench = Bench(at_power(power_mw), refinement, ())
+        self._bench = Bench(at_power(power_mw, precision="double"), refinement, ())
         self._fields = self._bench.fields(range(1))
         self._light: Light = self._bench.light
         self._uniform = self._track(())

@@ -33,7 +33,7 @@ def propagate(field: Array, time_step_ps: float, fibre: Fibre, steps: int) -> Ar
     own = fibre.gamma_per_w_km * fibre.self_factor * h
     other = fibre.gamma_per_w_km * fibre.cross_factor * h
     # Two halves that meet are one linear step, so a step costs two transforms and not four.
-    a = np.fft.ifft(half * np.fft.fft(field))
+    a = np.fft.ifft(half * np.fft.fft(field.astype(np.complex128)))
     for step in range(steps):
         power = np.abs(a) ** 2
         a = a * np.exp(1j * (own * power + other * power[::-1]))
