@@ -49,6 +49,7 @@ class Engine:
         self._client: Any = None
         self._ready = asyncio.Event()
         self._keeper: asyncio.Task[None] | None = None
+        self._pending: set[Any] = set()
         self._chases: set[asyncio.Task[None]] = set()
         self._present: set[str] = set()
         self._accepted: set[str] = set()
@@ -109,6 +110,7 @@ class Engine:
                 function, *args, key=f"crossdip-{next(_counter)}-{os.getpid()}",
                 priority=priority, pure=False, resources=needs,
             )  # fmt: skip
+            self._pending.add(future)
             try:
                 value = await future
             except asyncio.CancelledError:
@@ -131,6 +133,7 @@ class Engine:
                 return value
             finally:
                 # Dropping the last reference is what cancels a task that has not begun.
+                self._pending.discard(future)
                 future.release()
 
     def _chase(self, key: str) -> None:
@@ -236,6 +239,9 @@ class Engine:
             self._refusal, self._accepted_once = "", True
         elif not self._accepted_once:
             self._refusal = next(iter(reasons.values()), "")
+            if self._refusal:
+                # What waits for a worker is to hear of it, not to wait for ever.
+                await self._client.cancel(list(self._pending))
 
     async def _local_cluster(self, distributed: Any) -> Any:
         import dask

@@ -178,12 +178,25 @@ def test_only_workers_of_this_version_are_given_tasks(
     other = _other_version(tmp_path / "other")
     caplog.set_level(logging.WARNING)
 
-    async def check(right: ExitStack) -> None:
+    study, output = tmp_path / "study.json", tmp_path / "out.h5"
+    study.write_text(json.dumps(tiny(6)))
+
+    async def check(processes: ExitStack) -> None:
         engine = Engine(1, tmp_path, Cluster(address))
         engine.start()
+        waiting = asyncio.create_task(engine.run(os.getpid))
+        await _until(lambda: engine.condition == "ready")
+        processes.enter_context(_worker(address, tmp_path, environment={"PYTHONPATH": other}))
         with pytest.raises(EngineError, match=r"has crossdip 9\.9\.9 .*same version on both"):
-            await engine.run(os.getpid)
-        good = right.enter_context(_worker(address, tmp_path))
+            await waiting
+        ended = await asyncio.to_thread(
+            crossdip, "run", str(study), "-o", str(output), "--cluster", address
+        )
+        assert ended.returncode == 1
+        assert "has crossdip 9.9.9" in ended.stderr
+        assert f"this is {offer()}" in ended.stderr
+        assert not output.exists()
+        good = processes.enter_context(_worker(address, tmp_path))
         await _until(lambda: engine.workers == 1)
         assert await engine.run(os.getpid) == good.pid
         caplog.clear()
@@ -197,19 +210,9 @@ def test_only_workers_of_this_version_are_given_tasks(
             assert set(pids) == {good.pid}
         await engine.stop()
 
-    with ExitStack() as right:
-        right.enter_context(_scheduler(port))
-        right.enter_context(_worker(address, tmp_path, environment={"PYTHONPATH": other}))
-        _wait_for_workers(address, 1)
-        study = tmp_path / "study.json"
-        study.write_text(json.dumps(tiny(6)))
-        output = tmp_path / "out.h5"
-        ended = crossdip("run", str(study), "-o", str(output), "--cluster", address)
-        assert ended.returncode == 1
-        assert "has crossdip 9.9.9" in ended.stderr
-        assert f"this is {offer()}" in ended.stderr
-        assert not output.exists()
-        run(check(right))
+    with ExitStack() as processes:
+        processes.enter_context(_scheduler(port))
+        run(check(processes))
     told = "\n".join(caplog.messages)
     assert "has crossdip 9.9.9 (numerics 1, solver" in told
     assert "start it with --preload server.worker" in told
@@ -227,13 +230,6 @@ def _other_version(folder: Path) -> str:
         "Metadata-Version: 2.1\nName: crossdip\nVersion: 9.9.9\n"
     )
     return str(folder)
-
-
-def _wait_for_workers(
-    address: str, count: int, security: distributed.Security | None = None
-) -> None:
-    with distributed.Client(address, security=security, timeout=20) as client:
-        client.wait_for_workers(count, timeout=20)
 
 
 def test_a_study_over_tls_and_nobody_without_the_key(tmp_path: Path) -> None:
