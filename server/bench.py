@@ -64,6 +64,10 @@ def _headline(server: Served, workers: int, seed: int) -> Timing:
     _row("  to the first curve point", f"{timing.first_s['point']:.2f} s", "0.5 s")
     _row("  points", f"{timing.points}")
     _row("  core use, processes of the server over cores given", f"{100 * busy:.0f} %", "90 %")
+    own, workers_s = timing.server_cpu_s, timing.cpu_s - timing.server_cpu_s
+    _row(
+        "  processor time of the server itself, of all its workers", f"{own:.1f}, {workers_s:.1f} s"
+    )
     return timing
 
 
