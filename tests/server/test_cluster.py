@@ -128,29 +128,34 @@ def test_losing_and_gaining_workers_and_the_scheduler_changes_no_bit(tmp_path: P
     scratch, notes = tmp_path / "scratch", tmp_path / "notes"
     notes.mkdir()
     study = Study.model_validate(tiny(5, standard_error_target=1e-5, max_realizations=400))
-    lost: list[int] = []
+    lost: set[int] = set()
 
     async def check() -> None:
         engine = CountingEngine(notes, Cluster(address))
         engine.start()
         execution = Execution(study, engine, lambda news: None)
         whole = asyncio.create_task(execution.conduct())
-        executed_before = 0
+        delivered_before = 0
         try:
-            with _scheduler(port), _worker(address, scratch) as one, _worker(address, scratch):
+            with (
+                _scheduler(port) as scheduler,
+                _worker(address, scratch) as one,
+                _worker(address, scratch) as two,
+            ):
                 await _until(lambda: engine.workers == 2 and len(engine.delivered) >= 10)
                 one.kill()
-                lost.append(one.pid)
                 with _worker(address, scratch) as late:
                     await _until(lambda: len(engine.executed(late.pid)) >= 5)
-                    executed_before = len(engine.delivered)
-                    lost.append(late.pid)
+                    scheduler.kill()
+                    await _until(lambda: two.poll() is not None and late.poll() is not None)
+                    delivered_before = len(engine.delivered)
             await _until(lambda: engine.condition == "lost")
             assert not whole.done()
-            lost.extend(int(path.name) for path in notes.iterdir())
+            lost.update(int(path.name) for path in notes.iterdir())
+            assert len(lost) == 3
             with _scheduler(port), _worker(address, scratch), _worker(address, scratch):
                 result = await whole
-                assert len(engine.delivered) > executed_before
+                assert len(engine.delivered) > delivered_before
                 await engine.stop()
         finally:
             execution.close()
@@ -159,13 +164,13 @@ def test_losing_and_gaining_workers_and_the_scheduler_changes_no_bit(tmp_path: P
         again = Counter(engine.executed())
         again.subtract(engine.delivered)
         assert min(again.values()) == 0
-        for pid in set(lost):
+        for pid in lost:
             assert len([key for key in engine.executed(pid) if again[key]]) <= MOST_LOST
         for path in notes.iterdir():
             if int(path.name) not in lost:
                 keys = path.read_text().split()
                 assert len(keys) == len(set(keys))
-        assert again.total() <= MOST_LOST * len(set(lost))
+        assert again.total() <= MOST_LOST * len(lost)
 
     run(check())
 
