@@ -140,7 +140,7 @@ def _against_uniform() -> None:
         ladder.rungs(SECOND_ORDER, "double", [8 * 2**n for n in range(6)]),
         ladder.rungs(FOURTH_ORDER, "double", [4 * 2**n for n in range(7)]),
     ]
-    for scheme, steps in ((SECOND_ORDER, 4 * parts), (FOURTH_ORDER, 3 * parts)):
+    for scheme, steps in ((SECOND_ORDER, 2 * parts), (FOURTH_ORDER, 3 * parts)):
         (ours,) = ladder.rungs(scheme, "double", [steps], parts)
         best = min(yardstick.transforms_at(ours.error, rungs) for rungs in uniform)
         what = f"transforms over those of the best uniform steps at error {ours.error:.0e}"
@@ -160,6 +160,18 @@ def _growth(workers: int, headline: Timing, seed: int, full: bool) -> None:
         first = per if first is None else first
         _row(f"step of 2^{exponent} samples", f"{1e3 * taken_s:.3f} ms")
         _row("  per N log N, in that of the smallest", f"{per / first:.2f}", "1")
+    for power_mw, length_km in (
+        (50.0, 8.0),
+        (200.0, 8.0),
+        (800.0, 8.0),
+        (200.0, 2.0),
+        (200.0, 32.0),
+    ):
+        steps, time_step_ps = yardstick.steps_found(power_mw, length_km)
+        what = (
+            f"steps of an ensemble, {power_mw:g} mW over {length_km:g} km, on {time_step_ps:g} ps"
+        )
+        _row(what, f"{steps}")
     counts = (128, 4096 if full else 512)
     with served(workers) as (server, _):
         times = []

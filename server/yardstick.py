@@ -14,7 +14,7 @@ from typing import Any, TypeVar
 
 import numpy as np
 
-from solver.ensemble import Bench, run_round
+from solver.ensemble import CHECKED, Bench, pilot, run_round
 from solver.experiment import Experiment, Precision, Study, with_changes
 from solver.grid import Field
 from solver.propagation import Propagation, propagate, relative_error
@@ -307,3 +307,14 @@ def step_s(samples: int, steps: int) -> float:
 
     march()
     return min(timed(march)[1] for _ in range(3)) / taken / len(fields)
+
+
+def steps_found(power_mw: float, length_km: float) -> tuple[int, float]:
+    """Steps that an ensemble takes down the headline fibre, and its time step in ps."""
+    experiment = with_changes(at_power(power_mw, distances=1), {"line.*.length_km": length_km})
+    for refinement in (1, 2, 4):
+        bench = Bench(experiment, refinement, [length_km])
+        found = pilot(bench, bench.fields(range(CHECKED)), fewest=1)
+        if found.outcome.kind == "completed":
+            return found.steps, bench.grid.time_step_ps
+    raise RuntimeError(f"no grid holds {power_mw:g} mW over {length_km:g} km")
