@@ -98,9 +98,9 @@ def _against_plain_study(result: StudyResult, timing: Timing) -> None:
         f"to {script.most_steps} steps, search not charged"
     )
     ratio = script.cpu_s / timing.end_s
-    _row("headline study against the plain script, wall time", f"{ratio:.0f} ×", "25 ×, aim 50")
+    _row("headline study against the plain script, wall time", f"{ratio:.1f} ×", "25 ×, aim 50")
     ratio = script.cpu_s / timing.cpu_s
-    _row("  processor time, all of the server's against the script's", f"{ratio:.0f} ×")
+    _row("  processor time, all of the server's against the script's", f"{ratio:.1f} ×")
     _row("  largest discretization error on C12(0)", f"{worst:.1e}", "1e-3")
 
 
