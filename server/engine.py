@@ -111,13 +111,18 @@ class Engine:
                 priority=priority, pure=False, resources=needs,
             )  # fmt: skip
             self._pending.add(future)
+            waiting = asyncio.ensure_future(_value_of(future))
             try:
-                value = await future
+                # The client fetches values for all that wait in one common request. Cancelled with
+                # one of them, it would take the others, and every later one, with it.
+                value = await asyncio.shield(waiting)
             except asyncio.CancelledError:
+                waiting.add_done_callback(_let_go)
                 self._chase(future.key)
                 raise
             except (concurrent.futures.CancelledError, OSError) as error:
-                if isinstance(error, OSError) and client.status == "running":
+                lost = type(error).__name__ == "CommClosedError"
+                if isinstance(error, OSError) and not lost and client.status == "running":
                     raise
                 # The scheduler went away; the keeper clears _ready until it is back.
                 await asyncio.sleep(_WATCH_INTERVAL_S)
@@ -293,6 +298,16 @@ class Engine:
         client, self._client = self._client, None
         if client is not None:
             await client.close()
+
+
+async def _value_of(future: Any) -> Any:
+    return await future
+
+
+def _let_go(waiting: asyncio.Future[Any]) -> None:
+    """Take note of how a wait ended that nobody is interested in any more."""
+    if not waiting.cancelled():
+        waiting.exception()
 
 
 def _objection(address: str, resources: Iterable[str]) -> str:

@@ -341,7 +341,7 @@ class Runs:
         log.reopen()
         live = self._live.get(run_id)
         if live is not None and state in TERMINAL:
-            live.feed.flush()
+            live.feed.end()
         log.publish("state", {"state": state, "message": message})
         if state in TERMINAL:
             self._board.finish(run_id)

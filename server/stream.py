@@ -209,6 +209,7 @@ class RunFeed:
 
     def __init__(self, log: EventLog) -> None:
         self._log = log
+        self._ended = False
         self._points: dict[tuple[int, int], dict[str, Any]] = {}
         self._progress: dict[str, Any] | None = None
         self._point_throttle = Throttle(POINT_INTERVAL_S, self._emit_points)
@@ -228,7 +229,7 @@ class RunFeed:
 
     def map_rows(self, rows: dict[str, Any]) -> None:
         """Rows added to the evolution map."""
-        self._log.publish("map", rows)
+        self._publish("map", rows)
 
     def flush(self) -> None:
         """Send what waits."""
@@ -237,12 +238,21 @@ class RunFeed:
         self._emit_points()
         self._emit_progress()
 
+    def end(self) -> None:
+        """Send what waits and nothing more: the state that ends a run is its last event."""
+        self.flush()
+        self._ended = True
+
     def _emit_points(self) -> None:
         if self._points:
             batch, self._points = list(self._points.values()), {}
-            self._log.publish("point", {"points": batch})
+            self._publish("point", {"points": batch})
 
     def _emit_progress(self) -> None:
         if self._progress is not None:
             progress, self._progress = self._progress, None
-            self._log.publish("progress", progress)
+            self._publish("progress", progress)
+
+    def _publish(self, kind: str, data: dict[str, Any]) -> None:
+        if not self._ended:
+            self._log.publish(kind, data)

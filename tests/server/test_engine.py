@@ -114,3 +114,25 @@ def test_own_workers_are_capped_failures_come_through_and_cancelled_tasks_go(
         assert engine.workers == 0
 
     run(check())
+
+
+def test_cancelling_while_values_are_fetched_leaves_later_tasks_alone(tmp_path: Path) -> None:
+    """The client fetches the values of several tasks together, the cancelled ones' among them."""
+
+    async def check() -> None:
+        engine = Engine(2, tmp_path)
+        engine.start()
+        try:
+            for turns in range(40):
+                many = [asyncio.create_task(engine.run(abs, -number)) for number in range(20)]
+                await asyncio.wait(many, return_when=asyncio.FIRST_COMPLETED)
+                for _ in range(turns % 5):
+                    await asyncio.sleep(0)
+                for task in many:
+                    task.cancel()
+                await asyncio.gather(*many, return_exceptions=True)
+                assert await asyncio.create_task(engine.run(abs, -4)) == 4
+        finally:
+            await engine.stop()
+
+    run(check())
