@@ -1,4 +1,4 @@
-"""Closed forms of the linear regime, and the length scales of the nonlinear one.
+"""Closed forms of the linear regime.
 
 The intensities of Gaussian light obey the Gaussian moment theorem (Goodman, Statistical
 Optics, ch. 3): cov[I_j(t), I_k(t+τ)] = |Γ_jk(τ)|² with Γ_jk(τ) = ∫ Σ_d M*_jd M_kd e^{2πifτ} df,
@@ -59,10 +59,3 @@ def linear_correlations(experiment: Experiment, grid: Grid) -> LinearCorrelation
         cross=seen[0, 1] / np.sqrt(variance[0] * variance[1]),
         moment_cross=float(1.0 + seen[0, 1, 0] / (mean[0] * mean[1])),
     )
-
-
-def rms_width(spectrum: Real, omega: Real) -> float:
-    """Root-mean-square angular width of a power spectrum about its mean, rad/ps."""
-    total = spectrum.sum()
-    mean = (omega * spectrum).sum() / total
-    return float(np.sqrt(((omega - mean) ** 2 * spectrum).sum() / total))
