@@ -3,273 +3,292 @@
 Both are pure functions of what the task holds, so any of them may be run again, anywhere.
 """
 
-from collections.abc import Sequence
-from dataclasses import dataclass
+import math
+import time
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from solver.experiment import Experiment
-from solver.grid import Complex, Field, Grid, Real
-from solver.kernels import column_powers, intensity_moments
-from solver.propagation import (
-    STEP_LIMIT,
-    edge_limit,
-    relative_error,
-    richardson,
-    scheme_for,
-)
+from solver.features import features, moments
+from solver.grid import Field, Real
+from solver.kernels import column_powers, intensity_moments, map_levels
+from solver.passage import Passage, Trip
+from solver.propagation import STEP_LIMIT, relative_error
 from solver.receiver import detect
-from solver.relation import input_response
 from solver.result import MAP_COLUMNS, MAP_ROWS, LinearRegime, Picture
-from solver.source import draw, synthesize
-from solver.statistics import Layout, central, features, moments, sums_and_squares
-from solver.task import Findings, MapPart, MapTask, RoundOutcome, RoundTask
-from solver.theory import linear_correlations
-from solver.track import COMPLETED, Light, Outcome, Piece, Track
-from solver.transforms import COMPLEX, Transforms, batch_size, transforms
+from solver.statistics import Blocks, Estimate, Layout, central, sums_and_squares
+from solver.task import (
+    PILOTED,
+    Findings,
+    Leg,
+    MapPart,
+    MapTask,
+    RoundOutcome,
+    RoundTask,
+    Schedule,
+    chunks,
+    map_parts,
+)
+from solver.theory import launched_central, linear_correlations
+from solver.track import COMPLETED, Outcome
+from solver.transforms import batches, resampled
 
-CHECKED = 4
-"""Realizations on which the steps are found and the discretization error is measured."""
-PATIENCE = 3
-"""Times a pilot takes half as many steps again before a full band is put down to the light."""
-PILOT_GUARD = 1 / 30
+PILOT_GUARD = 1 / 3
 """The pilot stays this much clearer of a band ended by its steps than the ensemble must."""
-MAP_PARTS = 16
-"""Parts in which the live map is computed, so that it can be watched growing."""
+COARSER = 1.6
+"""Ratio of the numbers of steps of two runs that are compared."""
+STALLED = 0.9
+"""Ratio of two errors above which the shorter steps of the second were of no use."""
 BRIGHTEST = 3.0
 """Top of a map's power scale, in units of the total launch power."""
 
 
+@dataclass(frozen=True)
+class Seen:
+    """A batch at the end of the line: its trip, and moments, shape (realizations, distances, 5)."""
+
+    launched: Field
+    trip: Trip
+    moments: Real
+
+
 class Bench:
-    """An experiment made ready to run on one time step: response, track, scheme."""
+    """An experiment's passage with its receiver."""
 
-    def __init__(self, experiment: Experiment, refinement: int, recorded_km: Sequence[float]):
-        ensemble = experiment.ensemble
+    def __init__(self, experiment: Experiment) -> None:
         self.experiment = experiment
-        self.precision = ensemble.precision
-        self.layout = Layout.of(ensemble)
-        self.grid = Grid(ensemble.samples * refinement, ensemble.time_step_ps / refinement)
-        self.response: Complex = input_response(experiment, self.grid)
-        density = np.sum(np.abs(self.response) ** 2, axis=(0, 1))
-        # Gaussian light has more power where it is bright: ⟨P²⟩ = 1.5 ⟨P⟩² for two equal parts.
-        self.light = Light(1.5 * float(density.sum()), density / density.sum())
-        self.track = Track(
-            experiment.line,
-            self.grid,
-            wavelength_nm=experiment.source.wavelength_nm,
-            recorded_km=recorded_km,
-            fibre_seed=ensemble.seed,
-        )
-        self.tolerance = ensemble.field_tolerance
-        self.scheme = scheme_for(self.tolerance)
-        self.edge_limit = edge_limit(self.tolerance, self.precision)
+        self.layout = Layout.of(experiment.ensemble)
+        self.passage = Passage(experiment, experiment.ensemble.distances)
 
-    def fields(self, realizations: range) -> Field:
-        """Launched fields, √W, shape (realizations, 2, samples), in the ensemble's precision."""
-        noise = draw(self.experiment.ensemble.seed, realizations, self.grid)
-        return synthesize(noise, self.response).astype(COMPLEX[self.precision])
+    def detected(self, field: Field) -> Real:
+        """Intensities after the receiver, W, on the time step asked for or a finer one."""
+        asked = resampled(field, max(field.shape[2], self.layout.grid.samples))
+        return detect(asked, self.experiment.receiver, self.passage.grid(asked.shape[2]))
 
-    def expected_steps(self) -> int:
-        """Steps that should meet the tolerance, judged from the launch alone, within the limit."""
-        expected = self.track.expected_steps(self.scheme, self.light, self.tolerance)
-        expected = min(expected, float(STEP_LIMIT))
-        return sum(piece.steps for piece in self.pieces(np.ceil(expected)))
-
-    def pieces(self, steps: float) -> list[Piece]:
-        """The line in about ``steps`` steps."""
-        return self.track.pieces(self.scheme, self.light, steps)
-
-    def work(self, realizations: int) -> Transforms:
-        """Transforms for a batch of this many realizations."""
-        return transforms(realizations, self.grid.samples, self.precision)
-
-    def _moments(self, field: Field) -> Real:
+    def moments(self, field: Field) -> Real:
+        """Moments of the detected intensities, shape (realizations, 5)."""
         receiver = self.experiment.receiver
-        if receiver.filter == "none" and receiver.extinction_db is None:
+        if receiver.filter != "none":
+            return moments(self.detected(field))
+        # Time means of unfiltered intensities are unbiased on any time step that holds the field.
+        if receiver.extinction_db is None:
             return np.asarray(intensity_moments(field))
-        return moments(detect(field, receiver, self.grid))
+        return moments(detect(field, receiver, self.passage.grid(field.shape[2])))
 
-    def run(
-        self, fields: Field, pieces: Sequence[Piece], guard: float = 1.0
-    ) -> tuple[Field, Real, Outcome]:
-        """Propagate; returns fields at the end, moments (realizations, distances, 5), outcome."""
-        arrived = np.empty_like(fields)
-        recorded = np.empty((len(fields), self.layout.distances, 5))
-        batch = batch_size(self.grid.samples)
-        for start in range(0, len(fields), batch):
-            rows = slice(start, min(start + batch, len(fields)))
-            work = self.work(rows.stop - rows.start)
-            work.buffer[:] = fields[rows]
-            recorded[rows, 0] = self._moments(work.buffer)
+    def follow(self, launched: Field, schedule: Schedule, guard: float = 1.0) -> Seen:
+        """Take a batch down the line."""
+        recorded = np.empty((len(launched), self.layout.distances, 5))
+        recorded[:, 0] = self.moments(launched)
 
-            def observe(index: int, here: Field, rows: slice = rows) -> None:
-                recorded[rows, index] = self._moments(here)
+        def observe(leg: int, field: Field) -> None:
+            recorded[:, leg + 1] = self.moments(field)
 
-            outcome = self.track.march(
-                work,
-                pieces,
-                self.scheme,
-                self.precision,
-                edge_limit=self.edge_limit,
-                guard=guard,
-                observe=observe,
-            )
-            if outcome.kind != "completed":
-                return arrived, recorded, outcome
-            arrived[rows] = work.buffer
-        return arrived, recorded, COMPLETED
+        trip = self.passage.travel(launched, schedule, guard=guard, observe=observe)
+        return Seen(launched, trip, recorded)
 
-
-def _distances_km(experiment: Experiment) -> list[float]:
-    length, parts = experiment.length_km, experiment.ensemble.distances
-    return [length * (i + 1) / parts for i in range(parts)]
+    def features(self, seen: Seen) -> tuple[Real, Real]:
+        """Feature vectors of a batch for the accumulators."""
+        arrived = seen.trip.field
+        return features(self.layout, seen.launched, arrived, self.detected(arrived), seen.moments)
 
 
 @dataclass(frozen=True)
 class Pilot:
-    """Steps that meet the field tolerance, found on a few realizations, and what they cost C12.
+    """A schedule for the whole ensemble, found on a few realizations, and what it costs C12(0).
 
-    discretization_error: distance of C12(0) of these realizations from its limit of small
-    steps, estimated from a run with twice the steps, realization by realization.
+    seen: these realizations, on that schedule or one of shorter steps; bias: distance of C12(0)
+    at the end from its limit of small steps, estimated on them.
     """
 
-    steps: int
-    discretization_error: float
+    schedule: Schedule
+    bias: float
     transforms: int
+    seen: Seen
     outcome: Outcome = COMPLETED
 
 
-def pilot(bench: Bench, fields: Field, fewest: int) -> Pilot:
-    """Find the steps for a whole ensemble on a few of its realizations, which are all alike."""
-    scheme, order = bench.scheme, bench.scheme.order
-    steps, spent, added = float(max(fewest, bench.expected_steps())), 0, 0
+TOO_FINE = Outcome(
+    "tolerance_not_met",
+    "steps and samples needed are too many: loosen field_tolerance or standard_error_target, or "
+    "lower the power or the length",
+)
+
+
+def pilot(bench: Bench, launched: Field) -> Pilot:
+    """Find steps and grid for a whole ensemble on a few of its realizations, which are all alike.
+
+    The rule: the bias of C12(0) at the end of the line, plus its own standard error, stays under
+    BIAS_SHARE of the standard error that is aimed at, and the field's error under the field
+    tolerance. Both are judged from a second run with fewer steps (or more, where there is but one
+    on each leg), by Richardson's argument, realization by realization.
+    """
+    passage = bench.passage
+    order = passage.scheme.order
+    schedule, spent = passage.expected(), 0
+    other: Trip | None = None
+    previous_excess = math.inf
     while True:
-        if steps >= STEP_LIMIT:
-            return Pilot(
-                round(steps),
-                np.nan,
-                spent,
-                Outcome(
-                    "tolerance_not_met",
-                    "the steps needed are too many: loosen field_tolerance, or lower the power "
-                    "or the length",
-                ),
-            )
-        runs = []
-        outcome = COMPLETED
-        for factor in (1.0, 2.0):
-            pieces = bench.pieces(factor * steps)
-            count = sum(piece.steps for piece in pieces)
-            spent += count * scheme.transforms_per_step
-            field, recorded, outcome = bench.run(fields, pieces, PILOT_GUARD)
-            if outcome.kind != "completed":
-                break
-            runs.append((count, field, recorded[:, -1].mean(axis=0)))
-        if outcome.kind == "steps_too_long" or (outcome.kind == "aliased" and added < PATIENCE):
-            # Steps that are too long scatter energy to the edges of the band by themselves.
-            steps, added = 1.5 * steps, added + 1
+        seen = bench.follow(launched, schedule, PILOT_GUARD)
+        trip = seen.trip
+        spent += trip.transforms
+        schedule = trip.schedule
+        if trip.outcome.kind != "completed" or not passage.weights.any():
+            return Pilot(schedule, 0.0, spent, seen, trip.outcome)
+        if other is None or trip.steps < COARSER * other.steps:
+            other = _compared(passage, trip, launched)
+            spent += other.transforms
+            if other.outcome.kind != "completed":
+                return Pilot(schedule, 0.0, spent, seen, other.outcome)
+        # An error of c/N^p in one and c/M^p in the other: their difference tells c.
+        scale = abs((trip.steps / other.steps) ** order - 1.0)
+        field = resampled(other.field, trip.field.shape[2])
+        error = relative_error(field, trip.field) / scale
+        shift = _shift(seen.moments[:, -1], bench.moments(field))
+        bias, unsure = abs(float(shift.value[0])) / scale, float(shift.standard_error[0]) / scale
+        unsure = unsure if math.isfinite(unsure) else 0.0
+        excess = max(error / passage.field_tolerance, (bias + unsure) / passage.bias_allowed)
+        if excess <= 1.0:
+            # As few as have just been tried may do.
+            fewer = max((1.5 * excess) ** (1 / order), other.steps / trip.steps)
+            if fewer < 0.9:
+                return Pilot(_scaled(schedule, fewer), bias / fewer**order, spent, seen)
+            return Pilot(schedule, bias, spent, seen)
+        if excess > STALLED * previous_excess:
+            # Shorter steps do not help: what is left is cut off by the band.
+            widest = schedule[-1].samples
+            if schedule[0].samples == widest:
+                widest *= 2
+            if widest > passage.widest:
+                return Pilot(schedule, np.nan, spent, seen, TOO_FINE)
+            schedule = tuple(replace(leg, samples=widest) for leg in schedule)
+            other, previous_excess = None, math.inf
             continue
-        if outcome.kind != "completed":
-            return Pilot(count, np.nan, spent, outcome)
-        (coarse, field, seen), (fine, finer, seen_finer) = runs
-        if bench.track.commutes(scheme, bench.light):
-            return Pilot(coarse, 0.0, spent)
-        ratio = (fine / coarse) ** order
-        error = richardson(relative_error(field, finer), fine / coarse, order) * ratio
-        if error <= bench.tolerance:
-            shift = abs(float(central(seen) - central(seen_finer)))
-            return Pilot(coarse, shift * ratio / (ratio - 1.0), spent)
-        growth = (1.2 * error / bench.tolerance) ** (1 / order)
-        steps = coarse * min(max(growth, 1.2), 8.0)
+        previous_excess = excess
+        # An excess found with steps this long says little of how many it takes.
+        growth = min(max((1.2 * excess) ** (1 / order), 1.2), COARSER)
+        if trip.steps * growth > STEP_LIMIT:
+            return Pilot(schedule, np.nan, spent, seen, TOO_FINE)
+        # A leg has one step at least: fewer steps than legs grow from there.
+        growth *= max(1.0, trip.steps / max(leg.steps for leg in schedule))
+        schedule, other = _scaled(schedule, growth), trip
+
+
+def _scaled(schedule: Schedule, factor: float) -> Schedule:
+    return tuple(replace(leg, steps=math.ceil(leg.steps * factor)) for leg in schedule)
+
+
+def _compared(passage: Passage, trip: Trip, launched: Field) -> Trip:
+    """The same fields in fewer steps than a trip took, or in more where that cannot be."""
+    samples = trip.field.shape[2]
+    coarse = passage.watched(1)
+    for steps in (trip.steps / COARSER, COARSER * trip.steps):
+        leg = Leg(samples, round(steps))
+        count = sum(piece.steps for piece in coarse.pieces(leg)[0])
+        if abs(math.log(count / trip.steps)) > 0.7 * math.log(COARSER):
+            break
+    return coarse.travel(resampled(launched, samples), (leg,), checked=False)
+
+
+def _shift(moments: Real, others: Real) -> Estimate:
+    """C12(0) of the same realizations computed in two ways: the difference, shape (1,)."""
+    paired = Blocks(10)
+    paired.add(np.concatenate([moments, others], axis=1))
+    return paired.estimate(lambda m: (central(m[..., :5]) - central(m[..., 5:]))[..., None])
 
 
 def run_round(task: RoundTask) -> RoundOutcome:
-    """Realizations ``task.first`` and following; the first round also finds the steps."""
-    experiment = task.experiment
-    bench = Bench(experiment, task.refinement, _distances_km(experiment))
-    fields = bench.fields(range(task.first, task.first + task.count))
-    steps, spent, findings = task.steps, 0, None
-    if steps is None:
-        found = pilot(bench, fields[:CHECKED], task.fewest)
-        if found.outcome.kind != "completed":
-            return RoundOutcome(found.outcome.kind, found.outcome.advice)
-        steps, spent = found.steps, found.transforms
-        picture, outcome = _picture(experiment, task.refinement, steps)
-        if outcome.kind != "completed":
-            return RoundOutcome(outcome.kind, outcome.advice, steps=steps)
-        linear = _linear_regime(experiment, bench.layout)
-        findings = Findings(steps, found.discretization_error, picture, linear)
-    pieces = bench.pieces(steps)
-    arrived, recorded, outcome = bench.run(fields, pieces)
-    if outcome.kind != "completed":
-        return RoundOutcome(outcome.kind, outcome.advice, steps=steps)
-    detected = detect(arrived, experiment.receiver, bench.grid)
-    blocks, means = features(bench.layout, fields, arrived, detected, recorded)
-    spent += sum(piece.steps for piece in pieces) * bench.scheme.transforms_per_step
-    sums = sums_and_squares(means)
-    return RoundOutcome("completed", "", blocks, sums, spent, steps, findings)
+    """Realizations ``task.first`` and following; the first round also finds the schedule."""
+    start_s = time.perf_counter()
+    bench = Bench(task.experiment)
+    schedule, spent, findings = task.schedule, 0, None
+    blocks, sums = [], []
+    for chunk in chunks(task.experiment.ensemble.samples, task.first, task.count):
+        launched = bench.passage.fields(chunk)
+        found = []
+        rows = range(len(chunk))
+        if schedule is None:
+            rows = rows[PILOTED:]
+            piloted = pilot(bench, launched[:PILOTED])
+            outcome = piloted.outcome
+            if outcome.kind == "completed":
+                schedule, spent = piloted.schedule, piloted.transforms
+                picture, outcome = _picture(bench.passage, schedule)
+            if outcome.kind != "completed" or schedule is None:
+                return RoundOutcome(outcome.kind, outcome.advice)
+            steps = bench.passage.steps(schedule)
+            findings = Findings(schedule, steps, piloted.bias, picture, _linear_regime(bench))
+            found.append(bench.features(piloted.seen))
+        for batch in batches(rows, max(leg.samples for leg in schedule)):
+            seen = bench.follow(launched[batch.start : batch.stop], schedule)
+            spent += seen.trip.transforms
+            if seen.trip.outcome.kind != "completed":
+                return RoundOutcome(seen.trip.outcome.kind, seen.trip.outcome.advice)
+            found.append(bench.features(seen))
+        for_blocks, for_means = zip(*found, strict=True)
+        blocks += for_blocks
+        sums.append(sums_and_squares(np.concatenate(for_means)))
+    return RoundOutcome(
+        "completed",
+        blocks=np.concatenate(blocks),
+        sums=np.stack(sums),
+        transforms=spent,
+        seconds=time.perf_counter() - start_s,
+        findings=findings,
+    )
 
 
-def _linear_regime(experiment: Experiment, layout: Layout) -> LinearRegime:
-    found = linear_correlations(experiment, layout.grid)
+def _linear_regime(bench: Bench) -> LinearRegime:
+    layout = bench.layout
+    found = linear_correlations(bench.experiment, layout.grid)
     lags = np.arange(-layout.lags, layout.lags + 1) * layout.lag_stride
+    launched = launched_central(bench.experiment, bench.passage.grid(bench.passage.start_samples))
     return LinearRegime(
-        found.auto1[lags], found.auto2[lags], found.sum[lags], found.cross[lags], found.moment_cross
+        found.auto1[lags],
+        found.auto2[lags],
+        found.sum[lags],
+        found.cross[lags],
+        found.moment_cross,
+        launched,
     )
 
 
 class _Map:
-    """A bench for one realization, recording the rows of a map."""
+    """A passage of one realization, watched at the rows of a map."""
 
-    def __init__(self, experiment: Experiment, refinement: int, steps: float | None) -> None:
-        length = experiment.length_km
-        distances_km = [length * (i + 1) / MAP_ROWS for i in range(MAP_ROWS)]
-        self.bench = Bench(experiment, refinement, distances_km)
-        if steps is None:
-            steps = self.bench.expected_steps() * refinement
-        self.pieces = self.bench.pieces(steps)
+    def __init__(self, passage: Passage) -> None:
+        experiment = passage.experiment
+        self.passage = passage.watched(MAP_ROWS)
         self._columns = min(MAP_COLUMNS, experiment.ensemble.samples)
         self._scale_w = BRIGHTEST * 1e-3 * experiment.launch.total_power_mw / 255.0
         self._rows: list[Real] = []
 
     def launch(self) -> Field:
         """The field of realization 0; its row is the first."""
-        field = self.bench.fields(range(1))
-        self._keep(field)
+        field = self.passage.fields(range(1))
+        self.keep(0, field)
         return field
 
-    def _keep(self, field: Field) -> None:
+    def keep(self, _: int, field: Field) -> None:
+        """Take a row from a field."""
         self._rows.append(column_powers(field[0], self._columns))
-
-    def march(self, field: Field, pieces: Sequence[Piece]) -> tuple[Field, Outcome]:
-        """Keep a row for each recorded distance; the field at the end and the outcome."""
-        work = self.bench.work(1)
-        work.buffer[:] = field
-        outcome = self.bench.track.march(
-            work,
-            pieces,
-            self.bench.scheme,
-            self.bench.precision,
-            edge_limit=self.bench.edge_limit,
-            guard=1.0,
-            observe=lambda _, here: self._keep(here),
-        )
-        return np.array(work.buffer), outcome
 
     def picture(self) -> Picture:
         """The rows kept, as levels."""
-        first, second = np.stack(self._rows, axis=1)
-        total = first + second
-        contrast = (first - second) / np.where(total > 0.0, total, 1.0)
-        scaled = [127.5 * (contrast + 1.0), first / self._scale_w, second / self._scale_w]
-        levels = np.clip(np.rint(np.stack(scaled)), 0, 255).astype(np.uint8)
-        return Picture(levels, self._scale_w)
+        return Picture(map_levels(np.stack(self._rows), self._scale_w), self._scale_w)
 
 
-def _picture(experiment: Experiment, refinement: int, steps: int) -> tuple[Picture, Outcome]:
-    whole = _Map(experiment, refinement, steps)
-    _, outcome = whole.march(whole.launch(), whole.pieces)
-    return whole.picture(), outcome
+def _picture(passage: Passage, schedule: Schedule) -> tuple[Picture, Outcome]:
+    """The map of realization 0, in steps as long as the schedule's or shorter."""
+    whole = _Map(passage)
+    legs = _refined(schedule)
+    trip = whole.passage.travel(whole.launch(), legs, observe=whole.keep)
+    return whole.picture(), trip.outcome
+
+
+def _refined(schedule: Schedule) -> Schedule:
+    """A schedule of a map's rows from one of other legs of the same line."""
+    return tuple(schedule[row * len(schedule) // MAP_ROWS] for row in range(MAP_ROWS))
 
 
 def run_map(task: MapTask) -> MapPart:
@@ -277,15 +296,16 @@ def run_map(task: MapTask) -> MapPart:
 
     The first round of the same point replaces it by a map whose steps have been checked.
     """
-    whole = _Map(task.experiment, task.refinement, None)
+    whole = _Map(Passage(task.experiment, MAP_ROWS))
     field = whole.launch() if task.field is None else task.field
-    per_part = MAP_ROWS // MAP_PARTS
-    ends = np.flatnonzero([piece.recorded for piece in whole.pieces]) + 1
-    start = 0 if task.part == 0 else ends[task.part * per_part - 1]
-    stop = ends[(task.part + 1) * per_part - 1]
-    field, outcome = whole.march(field, whole.pieces[start:stop])
-    if outcome.kind != "completed":
-        return MapPart(outcome.kind)
-    first_row = 0 if task.part == 0 else task.part * per_part + 1
-    last = task.part + 1 == MAP_PARTS
-    return MapPart("completed", first_row, whole.picture(), None if last else field)
+    leg = task.leg or whole.passage.expected()[0]
+    parts = map_parts(task.experiment)
+    rows = MAP_ROWS // parts
+    start = task.part * rows
+    trip = whole.passage.travel(field, (leg,) * rows, first=start, observe=whole.keep)
+    if trip.outcome.kind != "completed":
+        return MapPart(trip.outcome.kind)
+    first_row = 0 if task.part == 0 else start + 1
+    if task.part + 1 == parts:
+        return MapPart("completed", first_row, whole.picture())
+    return MapPart("completed", first_row, whole.picture(), trip.field, trip.schedule[-1])

@@ -51,4 +51,5 @@ class Grid:
 
     def by_offset(self, spectrum: Real) -> Real:
         """A power spectrum in FFT order, last axis, rearranged onto :attr:`offset_ghz`."""
-        return spectrum[..., np.argsort(-self.frequency_thz)]
+        half = self.samples // 2
+        return np.concatenate([spectrum[..., half - 1 :: -1], spectrum[..., : half - 1 : -1]], -1)

@@ -11,6 +11,8 @@ from collections.abc import Callable
 from functools import cache
 from typing import Any
 
+import llvmlite.binding as llvm
+import numba
 import numpy as np
 from numba import njit
 
@@ -18,6 +20,12 @@ from solver.grid import Field, Real
 
 Kernel = Callable[..., Any]
 Floating = type[np.float32] | type[np.float64]
+
+if numba.config.CPU_NAME is None:
+    # LLVM keeps to 256-bit vectors on processors that have longer ones, for the sake of programs
+    # with little to do in them. These loops take half the time on the longer ones.
+    numba.config.CPU_NAME = llvm.get_host_cpu_name()
+    numba.config.CPU_FEATURES = f"{llvm.get_host_cpu_features().flatten()},-prefer-256-bit"
 
 
 @cache
@@ -64,6 +72,15 @@ def kerr_rotation(dtype: Floating) -> Kernel:
         for r in range(realizations):
             u = field[r, 0]
             v = field[r, 1]
+            if self_phase == cross_phase:  # Manakov: both components turn alike
+                for i in range(samples):
+                    ur, ui, vr, vi = u[i].real, u[i].imag, v[i].real, v[i].imag
+                    p = ur * ur + ui * ui
+                    q = vr * vr + vi * vi
+                    sine, cosine = turn(self_phase * (p + q))
+                    u[i] = complex(ur * cosine - ui * sine, ur * sine + ui * cosine)
+                    v[i] = complex(vr * cosine - vi * sine, vr * sine + vi * cosine)
+                continue
             for i in range(samples):
                 ur, ui, vr, vi = u[i].real, u[i].imag, v[i].real, v[i].imag
                 p = ur * ur + ui * ui
@@ -95,23 +112,34 @@ def linear_flow(spectrum: Field, operator: Field) -> None:
 
 
 @njit(cache=True, fastmath={"contract", "reassoc"}, error_model="numpy")
-def band_energy(spectrum: Field, first: int, last: int) -> Real:
-    """Energy of each realization in bins first to last − 1, both components; float64.
+def band_share(spectrum: Field, first: int, last: int) -> float:
+    """Largest share of a realization's energy in bins first to last − 1; nan if any is not finite.
 
     spectrum: complex, shape (realizations, 2, samples), FFT order.
     """
-    realizations, components, _ = spectrum.shape
-    energy = np.empty(realizations)
+    realizations, components, samples = spectrum.shape
+    largest = 0.0
     for r in range(realizations):
-        total = 0.0
+        inside = outside = 0.0
         for j in range(components):
-            line = spectrum[r, j, first:last]
-            partial = line[0].real * 0.0
-            for i in range(line.size):
-                partial += line[i].real * line[i].real + line[i].imag * line[i].imag
-            total += partial
-        energy[r] = total
-    return energy
+            for start, stop, within in (
+                (0, first, False),
+                (first, last, True),
+                (last, samples, False),
+            ):
+                line = spectrum[r, j, start:stop]
+                partial = spectrum[r, j, 0].real * 0.0
+                for i in range(line.size):
+                    partial += line[i].real * line[i].real + line[i].imag * line[i].imag
+                if within:
+                    inside += partial
+                else:
+                    outside += partial
+        if not math.isfinite(inside + outside):
+            return math.nan
+        if inside > 0.0:
+            largest = max(largest, inside / (inside + outside))
+    return largest
 
 
 @njit(cache=True, fastmath={"contract", "reassoc"}, error_model="numpy")
@@ -159,3 +187,73 @@ def intensity_moments(field: Field) -> Real:
         moments[r, 0], moments[r, 1] = p1 / samples, p2 / samples
         moments[r, 2], moments[r, 3], moments[r, 4] = p11 / samples, p22 / samples, p12 / samples
     return moments
+
+
+@njit(cache=True, fastmath={"contract"}, error_model="numpy")
+def domain_counts(
+    intensity: Real, width: int, longest: float, contrast_counts: Real, walls: Real
+) -> None:
+    """Contrast and walls of running means, counted into arrays given as zeros.
+
+    intensity: W, shape (realizations, 2, samples), periodic. width: samples in the running mean,
+    centred; longest: top of the histogram of durations, in samples. contrast_counts: float64,
+    shape (realizations, bins over [−1, 1]). walls: float64, (realizations, 1 + bins): the number
+    of sign changes of the contrast, then the durations between neighbours, a zero crossing
+    taken to be where the straight line between two samples crosses zero.
+    """
+    realizations, _, samples = intensity.shape
+    bins, lengths = contrast_counts.shape[1], walls.shape[1] - 1
+    ahead = width // 2
+    behind = width - 1 - ahead
+    contrast = np.empty(samples)
+    for r in range(realizations):
+        u = intensity[r, 0]
+        v = intensity[r, 1]
+        p = q = 0.0
+        for i in range(-behind, ahead + 1):
+            p += u[i % samples]
+            q += v[i % samples]
+        enter, leave = (ahead + 1) % samples, (-behind) % samples
+        for i in range(samples):
+            total = p + q
+            contrast[i] = (p - q) / total if total > 0.0 else 0.0
+            p += np.float64(u[enter]) - np.float64(u[leave])
+            q += np.float64(v[enter]) - np.float64(v[leave])
+            enter = enter + 1 if enter + 1 < samples else 0
+            leave = leave + 1 if leave + 1 < samples else 0
+        first = last = -1.0
+        for i in range(samples):
+            here = contrast[i]
+            contrast_counts[r, min(max(int((here + 1.0) * (0.5 * bins)), 0), bins - 1)] += 1.0
+            after = contrast[i + 1 if i + 1 < samples else 0]
+            if (here >= 0.0) != (after >= 0.0):
+                at = i + here / (here - after)
+                walls[r, 0] += 1.0
+                if first < 0.0:
+                    first = at
+                elif at - last <= longest:
+                    walls[r, 1 + min(int((at - last) / longest * lengths), lengths - 1)] += 1.0
+                last = at
+        if walls[r, 0] > 1.0 and first + samples - last <= longest:
+            around = (first + samples - last) / longest
+            walls[r, 1 + min(int(around * lengths), lengths - 1)] += 1.0
+
+
+@njit(cache=True, fastmath={"contract"}, error_model="numpy")
+def map_levels(powers: Real, scale_w: float) -> np.ndarray:
+    """An evolution map as levels, uint8, shape (3, rows, columns).
+
+    powers: W, shape (rows, 2, columns). Contrast from −1 (0) to 1 (255), 128 where it is dark;
+    then the two powers in steps of scale_w, up to 255.
+    """
+    rows, _, columns = powers.shape
+    levels = np.empty((3, rows, columns), dtype=np.uint8)
+    for row in range(rows):
+        for column in range(columns):
+            first, second = powers[row, 0, column], powers[row, 1, column]
+            total = first + second
+            contrast = (first - second) / total if total > 0.0 else 0.0
+            levels[0, row, column] = np.uint8(127.5 * (contrast + 1.0) + 0.5)
+            levels[1, row, column] = np.uint8(min(first / scale_w + 0.5, 255.0))
+            levels[2, row, column] = np.uint8(min(second / scale_w + 0.5, 255.0))
+    return levels

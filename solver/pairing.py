@@ -10,7 +10,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from solver.grid import Real
-from solver.statistics import TINY, Blocks, Layout, central
+from solver.statistics import TINY, Blocks, Control, Layout, central
 
 
 @dataclass(frozen=True)
@@ -33,23 +33,32 @@ def _grouped(blocks: Blocks, capacity: int) -> Real:
     return np.asarray(blocks.sums[: whole * ratio].reshape(whole, ratio, -1).sum(axis=1))
 
 
-def difference(layout: Layout, blocks: Blocks, first: Blocks) -> Difference | None:
-    """Paired difference at the end of the line; None below two groups that both have."""
-    last = slice(5 * (layout.distances - 1), 5 * layout.distances)
+def difference(
+    layout: Layout, blocks: Blocks, first: Blocks, launched: tuple[float, float]
+) -> Difference | None:
+    """Paired difference at the end of the line; None below two groups that both have.
+
+    launched: expectations of C12(0) at the launch of the variant and of the first, controls of
+    both ends as in :func:`solver.statistics.last_central`.
+    """
+    ends = np.r_[0:5, 5 * (layout.distances - 1) : 5 * layout.distances]
     capacity = max(blocks.capacity, first.capacity)
-    own, other = _grouped(blocks, capacity)[:, last], _grouped(first, capacity)[:, last]
+    own, other = _grouped(blocks, capacity)[:, ends], _grouped(first, capacity)[:, ends]
     groups = min(len(own), len(other))
     if groups < 2:
         return None
-    paired = Blocks(10)
+    paired = Blocks(20)
     paired.sums = np.concatenate([own[:groups], other[:groups]], axis=1)
     paired.counts = np.full(groups, capacity)
     paired.capacity = capacity
 
+    def at_launch(means: Real) -> Real:
+        return np.stack([central(means[..., :5]), central(means[..., 10:15])], axis=-1)
+
     def values(means: Real) -> Real:
-        ours, theirs = central(means[..., :5]), central(means[..., 5:])
+        ours, theirs = central(means[..., 5:10]), central(means[..., 15:])
         return np.stack([ours - theirs, ours, theirs], axis=-1)
 
-    value, error = paired.estimate(values)
+    value, error = paired.estimate(values, Control(at_launch, np.array(launched)))
     gain = (error[1] ** 2 + error[2] ** 2) / max(error[0] ** 2, TINY)
     return Difference(float(value[0]), float(error[0]), groups * capacity, float(gain))

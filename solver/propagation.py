@@ -13,11 +13,11 @@ from dataclasses import dataclass
 import numpy as np
 
 from solver.experiment import Precision, Span
+from solver.fibre import sections
 from solver.grid import Field, Grid, Real
-from solver.kernels import band_energy
 from solver.schemes import FOURTH_ORDER, SECOND_ORDER, Scheme
-from solver.track import COMPLETED, Light, Outcome, Piece, Track
-from solver.transforms import COMPLEX, Transforms, batch_size, transforms
+from solver.track import COMPLETED, Light, Outcome, Piece, Track, Wave, edge_share, expected_steps
+from solver.transforms import COMPLEX, batches
 
 PATIENCE = 2
 """Times the steps are halved before a full band is put down to the light itself."""
@@ -112,21 +112,18 @@ def propagate(
         raise ValueError(f"snapshots_km must ascend within 0 to {length:g} km")
 
     grid = Grid(field.shape[2], time_step_ps)
-    track = Track(
-        line, grid, wavelength_nm=wavelength_nm, recorded_km=wanted, fibre_seed=fibre_seed
-    )
+    track = Track(sections(line, grid, wavelength_nm, fibre_seed), grid, wanted)
     result = np.array(field, dtype=COMPLEX[precision])
     kept = (
         None
         if snapshots_km is None
         else np.zeros((len(wanted), *field.shape), dtype=COMPLEX[precision])
     )
-    batch = batch_size(grid.samples)
     steps = spent = 0
     error = 0.0
     outcome = COMPLETED
-    for start in range(0, field.shape[0], batch):
-        rows = slice(start, min(start + batch, field.shape[0]))
+    for batch in batches(range(field.shape[0]), grid.samples):
+        rows = slice(batch.start, batch.stop)
         part = _propagate_batch(track, field[rows], tolerance, precision, wanted)
         result[rows] = part.field
         if kept is not None and part.snapshots is not None:
@@ -163,10 +160,9 @@ def _propagate_batch(
     track: Track, field: Field, tolerance: float, precision: Precision, wanted: Sequence[float]
 ) -> Propagation:
     scheme = scheme_for(tolerance)
-    light = light_of(field)
+    weights = track.weights(scheme, light_of(field))
     limit = edge_limit(tolerance, precision)
-    spectrum = np.fft.fft(field)
-    work = transforms(field.shape[0], track.grid.samples, precision)
+    field = field.astype(COMPLEX[precision])
     spent = 0
 
     def finish(run: "_Run", error: float, outcome: Outcome) -> Propagation:
@@ -176,15 +172,14 @@ def _propagate_batch(
 
     def run(steps: float, keep: bool) -> "_Run":
         nonlocal spent
-        pieces = track.pieces(scheme, light, steps)
-        made = _run(track, work, field, pieces, scheme, precision, limit, wanted if keep else ())
+        pieces = track.pieces(weights, steps)
+        made = _run(track, field, pieces, scheme, limit, wanted if keep else ())
         spent += made.steps * scheme.transforms_per_step
         return made
 
-    total = band_energy(spectrum, 0, track.grid.samples)
-    share = track.edge_share(spectrum, total, track.grid.samples // 2)
+    share = edge_share(np.fft.fft(field), track.grid.samples // 2)
     if share > limit:
-        untouched = _Run(field.astype(COMPLEX[precision]), None, 0, COMPLETED)
+        untouched = _Run(field, None, 0, COMPLETED)
         return finish(
             untouched,
             math.nan,
@@ -198,7 +193,7 @@ def _propagate_batch(
         )
 
     keep = bool(wanted)
-    steps = track.expected_steps(scheme, light, tolerance)
+    steps = expected_steps(weights, scheme, tolerance)
     if steps > STEP_LIMIT:
         shortest = run(1, False)  # tells whether the arithmetic holds such a field at all
         if shortest.outcome.kind == "non_finite":
@@ -227,7 +222,7 @@ def _propagate_batch(
         fine = run(max(steps, 1.25 * coarse.steps), keep)
         if fine.outcome.kind != "completed":
             return finish(fine, math.nan, fine.outcome)
-        if track.commutes(scheme, light):
+        if not weights.any():
             return finish(fine, 0.0, COMPLETED)
         if fine.steps == coarse.steps:
             # Every stretch had its one step in both: two such runs would measure nothing.
@@ -269,18 +264,16 @@ class _Run:
 
 def _run(
     track: Track,
-    work: Transforms,
     field: Field,
     pieces: Sequence[Piece],
     scheme: Scheme,
-    precision: Precision,
     limit: float,
     wanted: Sequence[float],
 ) -> _Run:
-    work.buffer[:] = field
+    wave = Wave(field)
     snapshots = None
     if wanted:
-        snapshots = np.zeros((len(wanted), *field.shape), dtype=work.buffer.dtype)
+        snapshots = np.zeros((len(wanted), *field.shape), dtype=field.dtype)
         if wanted[0] == 0.0:
             snapshots[0] = field
     offset = 0 if wanted and wanted[0] == 0.0 else 1
@@ -290,7 +283,8 @@ def _run(
             snapshots[index - offset] = here
 
     outcome = track.march(
-        work, pieces, scheme, precision, edge_limit=limit, observe=observe, phases=bool(wanted)
+        wave, pieces, scheme, edge_limit=limit, observe=observe, phases=bool(wanted)
     )
+    wave.settle()
     steps = sum(piece.steps for piece in pieces)
-    return _Run(work.buffer.copy(), snapshots, steps, outcome)
+    return _Run(wave.field.copy(), snapshots, steps, outcome)

@@ -1,6 +1,7 @@
 """Polarization demultiplexer and square-law detection with an electrical low-pass."""
 
 import numpy as np
+from scipy import fft
 
 from solver.experiment import Receiver
 from solver.grid import Complex, Field, Grid, Real
@@ -46,12 +47,16 @@ def power_transfer(receiver: Receiver, frequency_ghz: Real) -> Real:
 
 
 def detect(field: Field, receiver: Receiver, grid: Grid) -> Real:
-    """Detected intensities in W, shape (realizations, 2, samples), from fields in √W."""
-    power = np.square(field.real, dtype=np.float64) + np.square(field.imag, dtype=np.float64)
+    """Detected intensities in W, shape (realizations, 2, samples), from fields in √W.
+
+    They have the precision of the fields.
+    """
+    power = field.real**2 + field.imag**2
     if receiver.extinction_db is not None:
-        power = np.einsum("jk,rkt->rjt", demultiplexing(receiver), power)
+        power = np.einsum("jk,rkt->rjt", demultiplexing(receiver).astype(power.dtype), power)
     if receiver.filter != "none":
         frequency_ghz = np.fft.rfftfreq(grid.samples, grid.time_step_ps) * 1e3
-        filtered = np.fft.rfft(power) * amplitude_transfer(receiver, frequency_ghz)
-        power = np.fft.irfft(filtered, n=grid.samples)
+        spectrum = fft.rfft(power)
+        spectrum *= amplitude_transfer(receiver, frequency_ghz)
+        power = fft.irfft(spectrum, n=grid.samples)
     return power

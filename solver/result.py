@@ -21,7 +21,7 @@ from solver.grid import Real
 from solver.pairing import Difference
 from solver.statistics import CORRELATIONS, ESTIMATES, SPECTRA, Estimate, Layout
 
-MAP_ROWS = 128
+MAP_ROWS = 64
 """Distances of an evolution map, the launch not counted."""
 MAP_COLUMNS = 1024
 FORMAT = "crossdip result 1"
@@ -41,19 +41,24 @@ class Picture:
 
 @dataclass(frozen=True)
 class LinearRegime:
-    """Closed forms with the Kerr term off, on the signed lag axis."""
+    """Closed forms with the Kerr term off, on the signed lag axis.
+
+    launched: C12(0) at the launch.
+    """
 
     auto1: Real
     auto2: Real
     sum: Real
     cross: Real
     moment_cross: float
+    launched: float
 
 
 @dataclass(frozen=True)
 class PointResult:
     """Every estimate of one point of one curve, so far or for good.
 
+    steps: of the line; samples: of the window at its end; transforms: of batches, trials included.
     difference: from the first variant at the same value of the sweep, common realizations only.
     estimates holds :data:`solver.statistics.ESTIMATES` by name; it is empty where the outcome
     is not ``completed``.
@@ -69,7 +74,7 @@ class PointResult:
     discretization_error: float = 0.0
     steps: int = 0
     transforms: int = 0
-    refinement: int = 1
+    samples: int = 0
     length_km: float = 0.0
     estimates: Mapping[str, Estimate] = field(default_factory=dict)
     linear: LinearRegime | None = None
@@ -135,7 +140,7 @@ class PointResult:
             "energy": dict(zip(names, powers, strict=True)),
             "steps": self.steps,
             "transforms": self.transforms,
-            "refinement": self.refinement,
+            "samples": self.samples,
         }
 
 
@@ -294,7 +299,7 @@ _SCALARS = (
     "discretization_error",
     "steps",
     "transforms",
-    "refinement",
+    "samples",
     "length_km",
 )
 
@@ -359,7 +364,7 @@ def _read_point(group: h5py.Group) -> PointResult:
         difference = Difference(**stored)
     if "linear_regime" in group:
         stored = {name: values[()] for name, values in group["linear_regime"].items()}
-        stored["moment_cross"] = float(stored["moment_cross"])
+        stored |= {name: float(stored[name]) for name in ("moment_cross", "launched")}
         linear = LinearRegime(**stored)
     if "map" in group:
         picture = Picture(group["map"][()], float(group["map"].attrs["intensity_scale_w"]))

@@ -1,9 +1,10 @@
 """Power spectra of thermal-like light, and its random draws."""
 
 import numpy as np
+from scipy import fft
 
 from solver.experiment import Source
-from solver.grid import Complex, Grid, Real
+from solver.grid import Complex, Field, Grid, Real
 
 
 def power_spectrum(source: Source, grid: Grid) -> Real:
@@ -40,11 +41,11 @@ def draw(seed: int, realizations: range, grid: Grid) -> Complex:
     return noise
 
 
-def synthesize(noise: Complex, response: Complex) -> Complex:
-    """Fields in √W from white noise and the response of the whole input.
+def synthesize(noise: Field, response: Field) -> Field:
+    """Fields in √W from white noise and the response of the whole input, in their precision.
 
     noise has shape (realizations, 2 draws, samples), response (2 components, 2 draws, samples)
     in √W; the result has shape (realizations, 2 components, samples).
     """
     spectrum = np.einsum("jdf,rdf->rjf", response, noise)
-    return np.asarray(np.fft.ifft(spectrum, norm="forward"))
+    return np.asarray(fft.ifft(spectrum, norm="forward"))

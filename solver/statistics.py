@@ -13,12 +13,14 @@ from typing import NamedTuple
 import numpy as np
 
 from solver.experiment import Ensemble
-from solver.grid import Field, Grid, Real
+from solver.grid import Grid, Real
 
 Arrays = Mapping[str, np.ndarray]
 
 MOST_BLOCKS = 128
 """Blocks kept for the jackknife; neighbours are merged in pairs when there would be more."""
+FEWEST_CONTROLLED = 8
+"""Blocks from which on a control is worth the degrees of freedom it costs."""
 CONTRAST_BINS = 50
 DURATION_BINS = 50
 MOST_LAGS = 400
@@ -55,6 +57,15 @@ class Estimate(NamedTuple):
     standard_error: Real
 
 
+@dataclass(frozen=True)
+class Control:
+    """Quantities whose expectation is known: a function of the feature means, shape (..., n),
+    and what it tends to, shape (n,)."""
+
+    function: Callable[[Real], Real]
+    expected: Real
+
+
 class Blocks:
     """Sums of feature vectors over blocks of consecutive realizations."""
 
@@ -82,23 +93,44 @@ class Blocks:
             self.sums = np.concatenate([self.sums, row[None]])
             self.counts = np.append(self.counts, 1)
 
-    def estimate(self, function: Callable[[Real], Real]) -> Estimate:
+    def estimate(
+        self, function: Callable[[Real], Real], control: "Control | None" = None
+    ) -> Estimate:
         """A function of the feature means and its standard error.
 
         ``function`` maps means of shape (..., features) to values of shape (..., n). The error
         is the delete-a-group jackknife for groups of unequal size (Busing, Meijer and
         van der Leeden, Statistics and Computing 9, 3, 1999, eqs 5 and 6); nan below two blocks.
+
+        With a control, what chance did to quantities whose expectation is known is taken out of
+        the values: the regression on control variates (Lavenberg and Welch, Management Science
+        27, 322, 1981), done on the pseudo-values, its loss of degrees of freedom included.
         """
         total, n = self.sums.sum(axis=0), self.counts.sum()
         value = function(total / n)
-        if len(self.counts) < 2:
+        groups = len(self.counts)
+        if groups < 2:
             return Estimate(value, np.full_like(value, np.nan))
-        left_out = function((total - self.sums) / (n - self.counts)[:, None])
-        h = (n / self.counts)[:, None]
+        left_out = (total - self.sums) / (n - self.counts)[:, None]
+        deviations = self._deviations(value, function(left_out))
+        lost = 1
+        if control is not None and groups >= FEWEST_CONTROLLED:
+            known = control.function(total / n)
+            regressors = self._deviations(known, control.function(left_out))
+            # Controls that chance leaves alone, or that go together, have no say of their own.
+            factors = np.linalg.lstsq(regressors, deviations, rcond=1e-6)[0]
+            value = value - (known - control.expected) @ factors
+            deviations = deviations - regressors @ factors
+            lost += regressors.shape[1]
+        variance = np.mean(deviations**2, axis=0) * (groups - 1) / (groups - lost)
+        return Estimate(value, np.sqrt(variance))
+
+    def _deviations(self, value: Real, left_out: Real) -> Real:
+        """Pseudo-values less their centre, scaled so that their mean square is the variance."""
+        h = (self.counts.sum() / self.counts)[:, None]
         pseudo = h * value - (h - 1.0) * left_out
         centre = len(h) * value - np.sum((1.0 - 1.0 / h) * left_out, axis=0)
-        variance = np.mean((pseudo - centre) ** 2 / (h - 1.0), axis=0)
-        return Estimate(value, np.sqrt(variance))
+        return np.asarray((pseudo - centre) / np.sqrt(h - 1.0))
 
     def arrays(self) -> dict[str, np.ndarray]:
         """Everything needed to go on later; copies, which later realizations do not change."""
@@ -213,92 +245,6 @@ class Layout:
         return 4 + CONTRAST_BINS + 4 * self.frequency_bins
 
 
-def moments(intensity: Real) -> Real:
-    """Time means of I1, I2, I1², I2², I1·I2; shape (realizations, 5)."""
-    first, second = intensity[:, 0], intensity[:, 1]
-    products = [first, second, first**2, second**2, first * second]
-    return np.stack([product.mean(axis=1) for product in products], axis=1)
-
-
-def raw_correlations(intensity: Real, layout: Layout) -> Real:
-    """Time means ⟨I_j(t) I_k(t+τ)⟩ at the layout's lags.
-
-    intensity: W, shape (realizations, 2, samples) on any time step of the layout's window.
-    Shape (realizations, 4·lags + 3): auto 1 and auto 2 at lags ≥ 0, cross at signed lags.
-    """
-    samples = intensity.shape[2]
-    spectrum = np.fft.rfft(intensity)
-    first, second = spectrum[:, 0], spectrum[:, 1]
-    stride = layout.lag_stride * (samples // layout.grid.samples)
-    positive = np.arange(layout.lags + 1) * stride
-    signed = np.arange(-layout.lags, layout.lags + 1) * stride
-
-    def correlate(density: Field, lags: np.ndarray) -> Real:
-        return np.asarray(np.fft.irfft(density, n=samples)[:, lags] / samples)
-
-    return np.concatenate(
-        [
-            correlate(np.abs(first) ** 2, positive),
-            correlate(np.abs(second) ** 2, positive),
-            correlate(first.conj() * second, signed),
-        ],
-        axis=1,
-    )
-
-
-def smoothed_contrast(intensity: Real, grid: Grid, smoothing_ps: float) -> Real:
-    """Contrast S1/S0 of running means over ``smoothing_ps``; shape (realizations, samples)."""
-    width = max(1, round(smoothing_ps / grid.time_step_ps))
-    window = np.zeros(grid.samples)
-    window[:width] = 1.0 / width
-    transfer = np.fft.rfft(np.roll(window, -(width // 2)))
-    smooth = np.fft.irfft(np.fft.rfft(intensity) * transfer, n=grid.samples)
-    total = smooth[:, 0] + smooth[:, 1]
-    return (smooth[:, 0] - smooth[:, 1]) / np.where(total > 0.0, total, 1.0)
-
-
-def wall_times(contrast: Real, time_step_ps: float) -> list[Real]:
-    """Times, ps, at which each realization's contrast changes sign, the window being periodic."""
-    following = np.roll(contrast, -1, axis=1)
-    crossed = (contrast >= 0.0) != (following >= 0.0)
-    times = []
-    for row, after, where in zip(contrast, following, crossed, strict=True):
-        at = np.flatnonzero(where)
-        times.append((at + row[at] / (row[at] - after[at])) * time_step_ps)
-    return times
-
-
-def domain_features(intensity: Real, grid: Grid, layout: Layout) -> tuple[Real, Real]:
-    """Walls and durations, shape (realizations, 1 + DURATION_BINS); contrast densities."""
-    contrast = smoothed_contrast(intensity, grid, layout.wall_smoothing_ps)
-    edges = np.linspace(0.0, layout.longest_duration_ps, DURATION_BINS + 1)
-    walls = np.zeros((len(contrast), 1 + DURATION_BINS))
-    for row, times in zip(walls, wall_times(contrast, grid.time_step_ps), strict=True):
-        row[0] = len(times)
-        if len(times) > 1:
-            durations = np.diff(times, append=times[0] + grid.window_ps)
-            row[1:] = np.histogram(durations, edges)[0]
-    bins = np.clip(((contrast + 1.0) * (CONTRAST_BINS / 2)).astype(np.int64), 0, CONTRAST_BINS - 1)
-    offsets = np.arange(len(contrast))[:, None] * CONTRAST_BINS
-    counts = np.bincount((bins + offsets).ravel(), minlength=len(contrast) * CONTRAST_BINS)
-    density = counts.reshape(-1, CONTRAST_BINS) * (CONTRAST_BINS / 2 / grid.samples)
-    return walls, density
-
-
-def power_densities(field: Field, layout: Layout) -> Real:
-    """Spectra of both components on the layout's bins, W/GHz; (realizations, 2·bins)."""
-    samples = field.shape[2]
-    kept = layout.grid.samples
-    spectrum = np.abs(np.fft.fft(field, norm="forward")) ** 2
-    if samples > kept:  # a finer time step than the axis: its outer bins lie beyond the axis
-        spectrum = np.concatenate(
-            [spectrum[..., : kept // 2], spectrum[..., samples - kept // 2 :]], axis=-1
-        )
-    density = layout.grid.by_offset(spectrum) * layout.grid.window_ps / 1e3
-    binned = density.reshape(*density.shape[:2], layout.frequency_bins, -1).mean(axis=3)
-    return np.asarray(binned.reshape(len(field), -1))
-
-
 def central(means: Real) -> Real:
     """C12(0), covariance normalization, from means of I1, I2, I1², I2², I1·I2 (last axis)."""
     m1, m2, m11, m22, m12 = np.moveaxis(means, -1, 0)
@@ -306,21 +252,33 @@ def central(means: Real) -> Real:
     return np.asarray((m12 - m1 * m2) / np.sqrt(variance))
 
 
-def last_central(layout: Layout, blocks: Blocks) -> Estimate:
+def launch_control(launched: float) -> Control:
+    """C12(0) of the same realizations at the launch, for features that begin with its moments.
+
+    launched: its expectation, exact by the Gaussian moment theorem.
+    """
+    return Control(lambda means: central(means[..., :5])[..., None], np.array([launched]))
+
+
+def last_central(layout: Layout, blocks: Blocks, launched: float) -> Estimate:
     """C12(0) at the end of the line; shape (1,)."""
     last = slice(5 * (layout.distances - 1), 5 * layout.distances)
-    return blocks.estimate(lambda means: central(means[..., last])[..., None])
+    return blocks.estimate(
+        lambda means: central(means[..., last])[..., None], launch_control(launched)
+    )
 
 
 class Estimators(Mapping[str, Estimate]):
     """Every estimate of one point of a study by name, worked out when it is first asked for.
 
+    launched: expectation of C12(0) at the launch, against which that along the line is controlled.
     A snapshot: accumulators that go on growing do not change it. The names and their units
     are those of :data:`ESTIMATES`.
     """
 
-    def __init__(self, layout: Layout, blocks: Blocks, means: Means) -> None:
+    def __init__(self, layout: Layout, blocks: Blocks, means: Means, launched: float) -> None:
         self.layout = layout
+        self._launched = launched
         self._blocks = Blocks.from_arrays(blocks.arrays())
         self._linear = means.estimate()
         self._known: dict[str, Estimate] = {}
@@ -345,7 +303,9 @@ class Estimators(Mapping[str, Estimate]):
     def _work_out(self, name: str) -> Estimate:
         match name:
             case "distance":
-                return self._blocks.estimate(lambda means: central(self._moments(means)))
+                return self._blocks.estimate(
+                    lambda means: central(self._moments(means)), launch_control(self._launched)
+                )
             case "moment_cross":
                 return self._blocks.estimate(self._moment_cross)
             case "walls_per_ns":
@@ -408,35 +368,3 @@ class Estimators(Mapping[str, Estimate]):
         width = self.layout.longest_duration_ps / DURATION_BINS
         count = np.maximum(means[..., self._walls_at : self._walls_at + 1], TINY)
         return np.asarray(means[..., self._walls_at + 1 :] / (count * width))
-
-
-def features(
-    layout: Layout,
-    launched: Field,
-    arrived: Field,
-    detected: Real,
-    distance_moments: Real,
-) -> tuple[Real, Real]:
-    """Feature vectors of realizations for :class:`Blocks` and :class:`Means`.
-
-    launched, arrived: fields at both ends of the line, √W, (realizations, 2, samples) on any
-    time step of the layout's window; detected: intensities after the receiver, W, same shape;
-    distance_moments: (realizations, distances, 5) after the receiver.
-    """
-    grid = Grid(arrived.shape[2], layout.grid.window_ps / arrived.shape[2])
-    walls, contrast = domain_features(detected, grid, layout)
-    rows = len(arrived)
-    blocks = np.concatenate(
-        [distance_moments.reshape(rows, -1), raw_correlations(detected, layout), walls], axis=1
-    )
-    powers = [np.mean(np.abs(f) ** 2, axis=2) for f in (launched, arrived)]
-    linear = np.concatenate(
-        [
-            *powers,
-            contrast,
-            power_densities(launched, layout),
-            power_densities(arrived, layout),
-        ],
-        axis=1,
-    )
-    return blocks, linear

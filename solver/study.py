@@ -9,20 +9,33 @@ which of them is fast.
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
+from itertools import pairwise
 
 import numpy as np
 
 from solver.experiment import Study
-from solver.grid import Field
 from solver.pairing import difference
 from solver.result import LinearRegime, Picture, PointResult, StudyResult
 from solver.statistics import Blocks, Estimators, Layout, Means, last_central
-from solver.task import Findings, MapPart, MapTask, RoundOutcome, RoundTask, Task
+from solver.task import (
+    CHUNK,
+    PILOTED,
+    Findings,
+    Leg,
+    MapPart,
+    MapTask,
+    RoundOutcome,
+    RoundTask,
+    Task,
+    chunk_size,
+    chunks,
+)
 
-ROUND = 16
-"""Realizations in one task."""
-MOST_REFINED = 4
-"""How far a point's time step may be divided when its spectrum fills the band."""
+TASK_S = 0.2
+"""How long a task should take: much more than handing it out does, and not so long that cores
+wait for the last one."""
+MOST_IN_TASK = 256
+"""Realizations in one task at most, so that what it hands back stays small."""
 
 
 def execute(task: Task) -> RoundOutcome | MapPart:
@@ -39,12 +52,7 @@ def prepare(study: Study) -> None:
     """Load and compile what a study's tasks need, on the worker this runs on."""
     first = study.experiment_at(0, 0)
     execute(MapTask("warm-map", 0, 0, 0, first, part=0))
-    execute(RoundTask("warm-round", 0, 0, 0, first, first=0, count=4, refinement=1, steps=None))
-
-
-def realizations_per_task(samples: int) -> int:
-    """Realizations in one task, fewer on large grids so that no task lasts long."""
-    return max(1, min(ROUND, ROUND * 8192 // samples))
+    execute(RoundTask("warm-round", 0, 0, 0, first, first=0, count=PILOTED, schedule=None))
 
 
 @dataclass(frozen=True)
@@ -77,11 +85,6 @@ class Chain:
         self.ensemble = self.experiment.ensemble
         self.layout = Layout.of(self.ensemble)
         self.rank = 0
-        self._start(refinement=1)
-
-    def _start(self, refinement: int, fewest: int = 1) -> None:
-        self.refinement = refinement
-        self._fewest_steps = fewest
         self.blocks = Blocks(self.layout.block_features)
         self.means = Means(self.layout.mean_features)
         self.findings: Findings | None = None
@@ -89,6 +92,7 @@ class Chain:
         self.outcome, self.advice = "completed", ""
         self.final = self.target_met = False
         self._round_end = 0
+        self._in_task = chunk_size(self.ensemble.samples)
         self._early: dict[int, RoundOutcome] = {}  # what overtook an earlier part of its round
         self._result: PointResult | None = None
 
@@ -101,27 +105,27 @@ class Chain:
         """Tasks of the next round, or of what is left of one; none when the point is final."""
         if self.final:
             return []
-        size = realizations_per_task(self.ensemble.samples * self.refinement)
-        first = self.realizations
+        first, size = self.realizations, self._in_task
         if first >= self._round_end:
-            # The first task finds the steps for all the others, so it goes alone.
-            wanted = self._wanted() if self.findings else first + size
+            # The first task finds the schedule for all the others, so it goes alone.
+            wanted = self._wanted() if self.findings else max(size, PILOTED)
             self._round_end = min(wanted, self.ensemble.max_realizations)
         last = self._round_end
+        starts = [first]
+        if self.findings:
+            starts += range(first + size - first % size, last, size)
         return [
             RoundTask(
-                key=f"round-{self.variant}-{self.point}-{self.refinement}-{self._fewest_steps}-{start}",
+                key=f"round-{self.variant}-{self.point}-{start}",
                 variant=self.variant,
                 point=self.point,
                 priority=-self.rank,
                 experiment=self.experiment,
                 first=start,
-                count=min(size, last - start),
-                refinement=self.refinement,
-                steps=self.findings.steps if self.findings else None,
-                fewest=self._fewest_steps,
+                count=stop - start,
+                schedule=self.findings.schedule if self.findings else None,
             )
-            for start in range(first, last, size)
+            for start, stop in pairwise([*starts, last])
         ]
 
     def _wanted(self) -> int:
@@ -130,14 +134,15 @@ class Chain:
         if n < fewest:
             return fewest
         ratio = self.standard_error() / self.ensemble.standard_error_target
-        needed = ROUND * math.ceil(min(n * ratio**2, 1e9) / ROUND)
-        return min(max(needed, n + ROUND), 4 * n)
+        needed = CHUNK * math.ceil(min(n * ratio**2, 1e9) / CHUNK)
+        return min(max(needed, n + CHUNK), 4 * n)
 
     def standard_error(self) -> float:
         """Standard error of C12(0) at the end of the line, infinite before there is one."""
-        if self.realizations < 2:
+        if self.realizations < 2 or not self.findings:
             return math.inf
-        error = float(last_central(self.layout, self.blocks).standard_error[0])
+        launched = self.findings.linear.launched
+        error = float(last_central(self.layout, self.blocks, launched).standard_error[0])
         return error if math.isfinite(error) else math.inf
 
     def absorb(self, task: RoundTask, outcome: RoundOutcome) -> list[RoundTask]:
@@ -145,31 +150,40 @@ class Chain:
 
         Parts are added in the order of their realizations; one that comes early waits.
         """
-        ours = (self.refinement, self._fewest_steps)
-        given_up = self.final or (task.refinement, task.fewest) != ours
-        if given_up or task.first < self.realizations:
+        if self.final or task.first < self.realizations:
             return []
         self._early[task.first] = outcome
         while (part := self._early.pop(self.realizations, None)) is not None:
             self._result = None
-            if part.outcome == "steps_too_long":
-                self._start(self.refinement, fewest=math.ceil(1.5 * part.steps))
-                return self.next_round()
-            if part.outcome == "aliased" and self.refinement < MOST_REFINED:
-                self._start(2 * self.refinement)
-                return self.next_round()
             if part.outcome != "completed":
-                self._start(self.refinement)
-                self.outcome, self.advice, self.final = part.outcome, part.advice, True
+                self._give_up(part)
                 return []
             self.blocks.add(part.blocks)
-            self.means.add(len(part.blocks), part.sums)
+            for chunk, sums in zip(
+                chunks(self.ensemble.samples, self.means.count, len(part.blocks)),
+                part.sums,
+                strict=True,
+            ):
+                self.means.add(len(chunk), sums)
             self.transforms += part.transforms
             self.findings = part.findings or self.findings
+            self._measure(part)
         if self.realizations < self._round_end:
             return []
         self._decide()
         return self.next_round()
+
+    def _give_up(self, part: RoundOutcome) -> None:
+        self.blocks = Blocks(self.layout.block_features)
+        self.means = Means(self.layout.mean_features)
+        self.findings = None
+        self.outcome, self.advice, self.final = part.outcome, part.advice, True
+
+    def _measure(self, part: RoundOutcome) -> None:
+        """Size the tasks to come by the time this one took; which decides no bit of the result."""
+        chunk = chunk_size(self.ensemble.samples)
+        fitting = TASK_S / max(part.seconds / len(part.blocks), 1e-9) / chunk
+        self._in_task = chunk * max(1, min(int(fitting), MOST_IN_TASK // chunk))
 
     def _decide(self) -> None:
         n = self.realizations
@@ -202,10 +216,12 @@ class Chain:
                 discretization_error=self.findings.discretization_error if self.findings else 0.0,
                 steps=self.findings.steps if self.findings else 0,
                 transforms=self.transforms,
-                refinement=self.refinement,
+                samples=self.findings.schedule[-1].samples if self.findings else 0,
                 length_km=self.experiment.length_km,
                 estimates=(
-                    Estimators(self.layout, self.blocks, self.means) if self.findings else {}
+                    Estimators(self.layout, self.blocks, self.means, self.findings.linear.launched)
+                    if self.findings
+                    else {}
                 ),
                 linear=self.findings.linear if self.findings else None,
                 picture=self.findings.picture if self.findings else None,
@@ -218,8 +234,6 @@ class Chain:
             return None
         arrays = {
             "round_end": np.array(self._round_end),
-            "refinement": np.array(self.refinement),
-            "fewest_steps": np.array(self._fewest_steps),
             "transforms": np.array(self.transforms),
             "outcome": np.array(self.outcome),
             "advice": np.array(self.advice),
@@ -230,6 +244,7 @@ class Chain:
             found = self.findings
             arrays |= {
                 "steps": np.array(found.steps),
+                "schedule": np.array([(leg.samples, leg.steps) for leg in found.schedule]),
                 "discretization_error": np.array(found.discretization_error),
                 "map": found.picture.data,
                 "intensity_scale_w": np.array(found.picture.intensity_scale_w),
@@ -243,7 +258,6 @@ class Chain:
         def under(prefix: str) -> dict[str, np.ndarray]:
             return {k.removeprefix(prefix): v for k, v in arrays.items() if k.startswith(prefix)}
 
-        self._start(int(arrays["refinement"]), int(arrays["fewest_steps"]))
         self._round_end = int(arrays["round_end"])
         self.transforms = int(arrays["transforms"])
         self.outcome, self.advice = str(arrays["outcome"]), str(arrays["advice"])
@@ -254,6 +268,7 @@ class Chain:
             return
         linear = under("linear/")
         self.findings = Findings(
+            tuple(Leg(int(samples), int(steps)) for samples, steps in arrays["schedule"]),
             int(arrays["steps"]),
             float(arrays["discretization_error"]),
             Picture(np.array(arrays["map"]), float(arrays["intensity_scale_w"])),
@@ -263,15 +278,11 @@ class Chain:
                 linear["sum"],
                 linear["cross"],
                 float(linear["moment_cross"]),
+                float(linear["launched"]),
             ),
         )
         if self.realizations >= self._round_end:
             self._decide()
-
-
-def _map_task(task: MapTask, part: int, refinement: int, field: Field | None) -> MapTask:
-    key = f"map-{refinement}-{part}"
-    return replace(task, key=key, part=part, refinement=refinement, field=field)
 
 
 def _outside_in(count: int) -> list[int]:
@@ -310,20 +321,18 @@ class StudyState:
         variant, point = self.live_map
         chain = self.chains[self.live_map]
         if not chain.findings and not chain.final:
-            tasks.append(MapTask("map-1-0", variant, point, 1, chain.experiment, part=0))
+            tasks.append(MapTask("map-0", variant, point, 1, chain.experiment, part=0))
         return sorted(tasks, key=lambda task: -task.priority)
 
     def absorb(self, task: Task, outcome: RoundOutcome | MapPart) -> list[Task]:
         """Take in what a task came to; returns the tasks that have become ready."""
         if isinstance(task, MapTask):
             assert isinstance(outcome, MapPart)
-            finer = 2 * task.refinement
-            crowded = outcome.outcome in ("aliased", "steps_too_long")
-            if crowded and finer <= MOST_REFINED:
-                return [_map_task(task, 0, finer, None)]
             if outcome.field is None:
                 return []
-            return [_map_task(task, task.part + 1, task.refinement, outcome.field)]
+            part = task.part + 1
+            goes_on = {"field": outcome.field, "leg": outcome.leg}
+            return [replace(task, key=f"map-{part}", part=part, **goes_on)]
         assert isinstance(task, RoundTask)
         assert isinstance(outcome, RoundOutcome)
         return list(self.chains[task.variant, task.point].absorb(task, outcome))
@@ -359,7 +368,9 @@ class StudyState:
         found = chain.result()
         if found is None or chain is first or not (chain.findings and first.findings):
             return found
-        return replace(found, difference=difference(chain.layout, chain.blocks, first.blocks))
+        launched = chain.findings.linear.launched, first.findings.linear.launched
+        paired = difference(chain.layout, chain.blocks, first.blocks, launched)
+        return replace(found, difference=paired)
 
     def touched(self, task: Task) -> list[tuple[int, int]]:
         """The (variant, point) whose results an outcome of the task may have changed."""

@@ -1,5 +1,6 @@
 """What is handed to workers and what they hand back: plain data that pickles small."""
 
+from collections.abc import Iterator
 from dataclasses import dataclass, field
 from typing import ClassVar
 
@@ -8,6 +9,50 @@ import numpy as np
 from solver.experiment import Experiment
 from solver.grid import Field, Real
 from solver.result import LinearRegime, Picture
+
+
+@dataclass(frozen=True)
+class Leg:
+    """From one watched distance to the next.
+
+    samples: in the window. steps: of the whole line, were they all as long as on this leg.
+    """
+
+    samples: int
+    steps: int
+
+
+Schedule = tuple[Leg, ...]
+"""What each leg of a line is computed with."""
+
+CHUNK = 16
+"""Realizations whose sums are kept together, on grids of ordinary size."""
+PILOTED = 4
+"""Realizations on which the schedule is found and the discretization error is measured."""
+
+
+def chunks(samples: int, first: int, count: int) -> Iterator[range]:
+    """The realizations from ``first`` on, in parts that are computed and added up together.
+
+    They begin at fixed numbers, so that the bits do not depend on how tasks are cut; parts of
+    large grids are smaller, the first one never smaller than a pilot needs.
+    """
+    size = chunk_size(samples)
+    while count > 0:
+        stop = max(size, PILOTED) if first == 0 else first + size - first % size
+        yield range(first, first + min(count, stop - first))
+        count -= stop - first
+        first = stop
+
+
+def chunk_size(samples: int) -> int:
+    """Realizations in a chunk, a power of two."""
+    return max(1, min(CHUNK, CHUNK * 8192 // samples))
+
+
+def map_parts(experiment: Experiment) -> int:
+    """Parts in which the live map is computed, so that it can be watched growing."""
+    return 16 if experiment.ensemble.samples > 2**14 else 4
 
 
 @dataclass(frozen=True)
@@ -24,32 +69,31 @@ class Task:
 
 @dataclass(frozen=True)
 class RoundTask(Task):
-    """Realizations ``first`` to ``first + count − 1`` of a point, on a time step divided by
-    ``refinement``; ``steps`` is None in the first round, which finds them, ``fewest`` or more."""
+    """Realizations ``first`` to ``first + count − 1`` of a point, in chunks whose sums are kept
+    apart; ``schedule`` is None in the first round, which finds it."""
 
     kind: ClassVar[str] = "round"
     first: int
     count: int
-    refinement: int
-    steps: int | None
-    fewest: int = 1
+    schedule: Schedule | None
 
 
 @dataclass(frozen=True)
 class MapTask(Task):
-    """Part ``part`` of the map of realization 0, on a time step divided by ``refinement``;
-    ``field`` is None at the launch."""
+    """Part ``part`` of the map of realization 0; ``field`` is what the part before it ended with
+    and ``leg`` how, both None at the launch."""
 
     kind: ClassVar[str] = "map"
     part: int
-    refinement: int = 1
     field: Field | None = None
+    leg: Leg | None = None
 
 
 @dataclass(frozen=True)
 class Findings:
     """What the first round finds out for the whole point."""
 
+    schedule: Schedule
     steps: int
     discretization_error: float
     picture: Picture
@@ -60,16 +104,17 @@ class Findings:
 class RoundOutcome:
     """Features of a round's realizations, or the outcome that ended it early.
 
-    ``steps_too_long`` asks for the point to be begun again with more than ``steps`` steps.
-    blocks: (realizations, block features); sums: (2, mean features).
+    blocks: (realizations, block features); sums: (chunks, 2, mean features). transforms: of
+    batches, counted once each; seconds: what the task took, which decides nothing but how many
+    realizations the next ones get.
     """
 
     outcome: str
     advice: str = ""
     blocks: Real = field(default_factory=lambda: np.zeros((0, 0)))
-    sums: Real = field(default_factory=lambda: np.zeros((2, 0)))
+    sums: Real = field(default_factory=lambda: np.zeros((0, 2, 0)))
     transforms: int = 0
-    steps: int = 0
+    seconds: float = 0.0
     findings: Findings | None = None
 
 
@@ -84,3 +129,4 @@ class MapPart:
     first_row: int = 0
     picture: Picture | None = None
     field: Field | None = None
+    leg: Leg | None = None

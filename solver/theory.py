@@ -41,7 +41,16 @@ def linear_correlations(experiment: Experiment, grid: Grid) -> LinearCorrelation
     line = sections(
         experiment.line, grid, experiment.source.wavelength_nm, experiment.ensemble.seed
     )
-    response = linear_response(line, input_response(experiment, grid))
+    return _correlations(linear_response(line, input_response(experiment, grid)), experiment, grid)
+
+
+def launched_central(experiment: Experiment, grid: Grid) -> float:
+    """C12(0) that the receiver would see of the launch itself."""
+    return float(_correlations(input_response(experiment, grid), experiment, grid).cross[0])
+
+
+def _correlations(response: Complex, experiment: Experiment, grid: Grid) -> LinearCorrelations:
+    """Correlations of light of a response, after the receiver."""
     coherence = mutual_coherence(response)
     mean = coherence[[0, 1], [0, 1], 0].real
     demultiplex = demultiplexing(experiment.receiver)

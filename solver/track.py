@@ -7,12 +7,11 @@ from typing import Any, Literal
 
 import numpy as np
 
-from solver.experiment import Precision, Span
-from solver.fibre import sections
+from solver.fibre import Section
 from solver.grid import Complex, Field, Grid, Real
-from solver.kernels import band_energy, kerr_rotation, linear_flow
+from solver.kernels import band_share, kerr_rotation, linear_flow
 from solver.schemes import Scheme
-from solver.transforms import COMPLEX, Transforms
+from solver.transforms import Transforms, resampled, transforms
 
 OutcomeKind = Literal[
     "completed", "aliased", "non_finite", "under_resolved", "tolerance_not_met", "steps_too_long"
@@ -22,7 +21,7 @@ Observer = Callable[[int, Field], None]
 
 EDGE = 1 / 16
 """Share of the samples, at each end of the band, that has to stay empty."""
-ERROR_CONSTANT = {2: 0.5, 4: 0.3}
+ERROR_CONSTANT = {2: 0.5, 4: 0.04}
 """Measured: error of a run is about this, times W^{p+1}/N^p, W the total weight, N the steps."""
 
 
@@ -61,24 +60,69 @@ class Piece:
     recorded: bool
 
 
+class Wave:
+    """Fields under way down a line, and a Kerr turn put off until a phase is needed.
+
+    The Kerr flow leaves all powers alone, so the half turn that ends one step waits for the one
+    that begins the next. The buffer is shared by all waves of one shape in this process.
+    """
+
+    def __init__(self, field: Field) -> None:
+        realizations, _, samples = field.shape
+        precision = "single" if field.dtype == np.complex64 else "double"
+        self.work: Transforms = transforms(realizations, samples, precision)
+        self.work.buffer[:] = field
+        self._real = np.float32 if precision == "single" else np.float64
+        self._rotate = kerr_rotation(self._real)
+        self._own = self._other = 0.0
+
+    @property
+    def field(self) -> Field:
+        """The buffer, √W, (realizations, 2, samples): powers are right, phases once settled."""
+        return self.work.buffer
+
+    def turn(self, own: float, other: float) -> None:
+        """Put a Kerr turn off, rad/W by the own power and by that of the other component."""
+        self._own += own
+        self._other += other
+
+    def settle(self) -> None:
+        """Carry out what was put off."""
+        if self._own or self._other:
+            self._rotate(self.work.buffer, self._real(self._own), self._real(self._other))
+            self._own = self._other = 0.0
+
+    def kept(self) -> "KeptWave":
+        """A copy to come back to."""
+        return KeptWave(self.work.buffer.copy(), self._own, self._other)
+
+
+@dataclass(frozen=True)
+class KeptWave:
+    """A wave as it was at some distance."""
+
+    field: Field
+    own: float
+    other: float
+
+    def again(self, samples: int) -> Wave:
+        """The wave, on this many samples of its window."""
+        wave = Wave(resampled(self.field, samples))
+        wave.turn(self.own, self.other)
+        return wave
+
+
 class Track:
     """A line cut at the recorded distances, with the means to choose and take steps on it."""
 
     def __init__(
-        self,
-        line: Sequence[Span],
-        grid: Grid,
-        *,
-        wavelength_nm: float,
-        recorded_km: Sequence[float] = (),
-        fibre_seed: int = 0,
+        self, made: Sequence[Section], grid: Grid, recorded_km: Sequence[float] = ()
     ) -> None:
         self.grid = grid
-        self.sections = sections(line, grid, wavelength_nm, fibre_seed)
+        self.sections = made
         self.length_km = sum(section.length_km for section in self.sections)
         self._stretches = list(self._cut([z for z in recorded_km if z > 0.0]))
         self._operators: dict[tuple[Any, ...], tuple[list[Any], int]] = {}
-        self._weighed: tuple[Scheme, Light, Real] | None = None
 
     def _cut(self, recorded_km: Sequence[float]) -> Iterator[tuple[int, float, float, bool]]:
         """Yield (section, start, end, recorded) of every stretch between two borders."""
@@ -95,13 +139,13 @@ class Track:
     def weights(self, scheme: Scheme, light: Light) -> Real:
         """Relative number of steps each stretch deserves: ∫ c^{1/(p+1)} dz.
 
+        All zero where the linear and the Kerr flow commute all along, so that any steps are exact.
+
         A step of length h errs by about c h^{p+1}, with c of the size of nested commutators of
         the linear rate l and the Kerr rate n, c = n l (n + l)^{p−1}. Loss α leaves the Kerr
         term's form alone, so of its commutators only n α^p is there. Steps that err equally
         then have the density c^{1/(p+1)}.
         """
-        if self._weighed and self._weighed[0] is scheme and self._weighed[1] is light:
-            return self._weighed[2]
         p = scheme.order
         weights = []
         power = light.power_w
@@ -114,22 +158,10 @@ class Track:
             error = kerr * (linear * (kerr + linear) ** (p - 1) + section.attenuation_per_km**p)
             weights.append((end - start) * error ** (1 / (p + 1)))
             power *= decay
-        self._weighed = scheme, light, np.array(weights)
-        return self._weighed[2]
+        return np.array(weights)
 
-    def commutes(self, scheme: Scheme, light: Light) -> bool:
-        """Whether linear and Kerr flow commute all along, so that any steps are exact."""
-        return not self.weights(scheme, light).any()
-
-    def expected_steps(self, scheme: Scheme, light: Light, tolerance: float) -> float:
-        """Number of steps that should meet a tolerance, from the light at the input alone."""
-        p = scheme.order
-        total = float(self.weights(scheme, light).sum())
-        return float((ERROR_CONSTANT[p] * total ** (p + 1) / tolerance) ** (1 / p))
-
-    def pieces(self, scheme: Scheme, light: Light, steps: float) -> list[Piece]:
-        """About ``steps`` steps shared out over the line, at least one for each stretch."""
-        weights = self.weights(scheme, light)
+    def pieces(self, weights: Real, steps: float) -> list[Piece]:
+        """About ``steps`` steps shared out over the stretches, at least one for each."""
         total = float(weights.sum()) or 1.0
         pieces = []
         for (section, start, end, recorded), weight in zip(self._stretches, weights, strict=True):
@@ -138,7 +170,7 @@ class Track:
         return pieces
 
     def _flows(
-        self, piece: Piece, scheme: Scheme, precision: Precision, guarded: bool
+        self, piece: Piece, scheme: Scheme, precision: type, guarded: bool
     ) -> tuple[list[Any], int]:
         """Linear operators of the scheme's stages, with the transforms' scale taken out.
 
@@ -158,10 +190,9 @@ class Track:
                 inside = phase < 0.95 * math.pi
                 outwards = inside[1:half] & inside[:half:-1]
                 bins = half if outwards.all() else 1 + int(np.argmin(outwards))
+            scaled = inside / self.grid.samples
             made = {
-                part: (np.exp(rate * (part * piece.step_km)) * inside / self.grid.samples).astype(
-                    COMPLEX[precision]
-                )
+                part: (np.exp(rate * (part * piece.step_km)) * scaled).astype(precision)
                 for part in set(scheme.linear)
             }
             if self.grid.samples * len(self._operators) > 2**22:
@@ -171,101 +202,107 @@ class Track:
 
     def march(
         self,
-        work: Transforms,
+        wave: Wave,
         pieces: Sequence[Piece],
         scheme: Scheme,
-        precision: Precision,
         *,
         edge_limit: float,
         guard: float = 0.0,
         observe: Observer | None = None,
         phases: bool = False,
     ) -> Outcome:
-        """Propagate ``work.buffer`` in place, as far as its outcome allows.
+        """Propagate a wave in place, as far as its outcome allows.
 
         edge_limit: share of a realization's energy allowed at the edges of the band.
         guard: when positive, end the band where the splitting itself would make sidebands, for
         the long steps of an ensemble that are not checked one by one; the share of energy
         allowed at such an end is edge_limit times this, and ``steps_too_long`` the outcome of more.
-
-        The Kerr turn that ends one step is put off until the next one, or until a phase is
-        needed: it leaves all powers alone. An observer of fields, not of powers only, asks for
+        observe: called at recorded distances; one that reads fields, not powers only, asks for
         ``phases``.
         """
-        real = np.float32 if precision == "single" else np.float64
-        rotate = kerr_rotation(real)
-        buffer = work.buffer
-        own = other = 0.0
-
-        def settle() -> None:
-            nonlocal own, other
-            if own or other:
-                rotate(buffer, real(own), real(other))
-                own = other = 0.0
-
+        buffer, forward, inverse = wave.field, wave.work.forward, wave.work.inverse
         recorded = 0
         for piece in pieces:
             section = self.sections[piece.section]
-            flows, bins = self._flows(piece, scheme, precision, guard > 0.0)
+            flows, bins = self._flows(piece, scheme, buffer.dtype.type, guard > 0.0)
             limit = edge_limit * (guard if 2 * bins < self.grid.samples else 1.0)
             turn_own = section.kerr_self * piece.step_km
             turn_other = section.kerr_cross * piece.step_km
             if section.axes is not None:
-                settle()
+                wave.settle()
                 _turn_axes(buffer, section.axes)
             for step in range(piece.steps):
                 for stage, flow in enumerate(flows):
-                    own += scheme.kerr[stage] * turn_own
-                    other += scheme.kerr[stage] * turn_other
-                    settle()
-                    work.forward()
+                    wave.turn(scheme.kerr[stage] * turn_own, scheme.kerr[stage] * turn_other)
+                    wave.settle()
+                    forward()
                     if step + 1 == piece.steps and stage + 1 == len(flows):
-                        outcome = self._inspect(buffer, bins, limit, piece.end_km)
+                        outcome = self._inspect(buffer, bins, limit, piece, guard > 0.0)
                         if outcome.kind != "completed":
                             return outcome
                     linear_flow(buffer, flow)
-                    work.inverse()
-                own += scheme.kerr[-1] * turn_own
-                other += scheme.kerr[-1] * turn_other
+                    inverse()
+                wave.turn(scheme.kerr[-1] * turn_own, scheme.kerr[-1] * turn_other)
             if section.axes is not None:
-                settle()
+                wave.settle()
                 _turn_axes(buffer, section.axes.conj().T)
             if piece.recorded:
                 recorded += 1
                 if phases:
-                    settle()
+                    wave.settle()
                 if observe is not None:
                     observe(recorded, buffer)
-        settle()
         return COMPLETED
 
-    def _inspect(self, spectrum: Field, bins: int, edge_limit: float, z_km: float) -> Outcome:
+    def _inspect(
+        self, spectrum: Field, bins: int, edge_limit: float, piece: Piece, guarded: bool
+    ) -> Outcome:
         """Whether spectra are finite and keep clear of the edges of the band."""
-        total = band_energy(spectrum, 0, self.grid.samples)
-        if not np.isfinite(total).all():
+        share = edge_share(spectrum, bins)
+        if share <= edge_limit:
+            return COMPLETED
+        if math.isnan(share):
             return Outcome(
                 "non_finite",
                 "the field overflowed: look for an extreme power, nonlinear coefficient or length",
-                z_km,
+                piece.end_km,
             )
-        share = self.edge_share(spectrum, total, bins)
-        if share > edge_limit and 2 * bins < self.grid.samples:
-            return Outcome("steps_too_long", "take shorter steps", z_km)
-        if share > edge_limit:
-            return Outcome(
-                "aliased",
-                f"the spectrum reached the edge of its band at {z_km:.3g} km "
-                f"(share of the energy there {share:.1e}, allowed {edge_limit:.1e}): "
-                f"use at least {2 * self.grid.samples} samples in the same window",
-                z_km,
-            )
-        return COMPLETED
+        if 2 * bins < self.grid.samples or (guarded and self._driven(spectrum, share, piece)):
+            return Outcome("steps_too_long", "take shorter steps", piece.end_km)
+        return Outcome(
+            "aliased",
+            f"the spectrum reached the edge of its band at {piece.end_km:.3g} km "
+            f"(share of the energy there {share:.1e}, allowed {edge_limit:.1e}): "
+            f"use at least {2 * self.grid.samples} samples in the same window",
+            piece.end_km,
+        )
 
-    def edge_share(self, spectrum: Field, total: Real, bins: int) -> float:
-        """Largest share of a realization's energy at the edges of a band of ±``bins`` bins."""
-        first = bins - max(1, round(bins * EDGE))
-        edge = band_energy(spectrum, first, self.grid.samples - first)
-        return float(np.max(edge / np.maximum(total, np.finfo(float).tiny)))
+    def _driven(self, spectrum: Field, share: float, piece: Piece) -> bool:
+        """Whether what stands at the end of the grid was made by the steps.
+
+        The Kerr phase brings the resonance of the steps inside the phase of π. Light that spreads
+        falls off towards the end of the grid; sidebands that the steps drive stand out there.
+        """
+        half = self.grid.samples // 2
+        rate = self.sections[piece.section].rate.imag
+        phase = np.abs(rate[:, half] - rate[:, 0]).max() * piece.step_km
+        inner = band_share(spectrum, round(half * (1 - 3 * EDGE)), round(half * (1 + 3 * EDGE)))
+        return bool(phase > math.pi / 3 and share > inner - share)
+
+
+def edge_share(spectrum: Field, bins: int) -> float:
+    """Largest share of a realization's energy at the edges of a band of ±``bins`` bins.
+
+    spectrum: complex, shape (realizations, 2, samples), FFT order; nan where it is not finite.
+    """
+    first = bins - max(1, round(bins * EDGE))
+    return float(band_share(spectrum, first, spectrum.shape[2] - first))
+
+
+def expected_steps(weights: Real, scheme: Scheme, tolerance: float) -> float:
+    """Number of steps that should meet a field tolerance, from :meth:`Track.weights` alone."""
+    p = scheme.order
+    return float((ERROR_CONSTANT[p] * float(weights.sum()) ** (p + 1) / tolerance) ** (1 / p))
 
 
 def _linear_rate(rate: Complex, density: Real) -> float:

@@ -8,6 +8,7 @@ the user's cache folder as FFTW "wisdom"; whoever comes second uses the first on
 import os
 import pickle
 import tempfile
+from collections.abc import Iterator
 from functools import lru_cache
 from pathlib import Path
 from typing import Any
@@ -15,8 +16,10 @@ from typing import Any
 import llvmlite.binding as llvm
 import numpy as np
 import pyfftw
+from scipy import fft
 
 from solver.experiment import Precision
+from solver.grid import Field
 
 COMPLEX: dict[Precision, type[np.complexfloating[Any, Any]]] = {
     "single": np.complex64,
@@ -24,13 +27,22 @@ COMPLEX: dict[Precision, type[np.complexfloating[Any, Any]]] = {
 }
 BATCH_SAMPLES = 2**14
 """Samples of each component in one batch, so that field and operator stay in a core's cache."""
-MOST_TOGETHER = 4
-"""Realizations in one batch at most: the number on which the accuracy is checked."""
+MOST_TOGETHER = 8
+"""Realizations in one batch at most."""
 
 
 def batch_size(samples: int) -> int:
     """Realizations that are transformed together."""
     return min(MOST_TOGETHER, max(1, BATCH_SAMPLES // samples))
+
+
+def batches(rows: range, samples: int) -> Iterator[range]:
+    """Parts of the rows to transform together, their sizes powers of two so that plans are few."""
+    start = rows.start
+    while start < rows.stop:
+        size = min(batch_size(samples), 1 << (rows.stop - start).bit_length() - 1)
+        yield range(start, start + size)
+        start += size
 
 
 def _cache_folder() -> Path:
@@ -99,3 +111,19 @@ def _publish(wisdom: Path) -> bool:
 def transforms(realizations: int, samples: int, precision: Precision) -> Transforms:
     """The planned transforms of a shape, one set per process: not to be held across calls."""
     return Transforms(realizations, samples, precision)
+
+
+def resampled(field: Field, samples: int) -> Field:
+    """The same band-limited light on another number of samples of its window.
+
+    field: complex, shape (..., samples now), both numbers even; bins beyond the smaller band are
+    filled with zeros or left out. Returns the given array where the numbers are equal.
+    """
+    have = field.shape[-1]
+    if have == samples:
+        return field
+    spectrum = fft.fft(field, norm="forward")
+    half = min(have, samples) // 2
+    made = np.zeros((*field.shape[:-1], samples), dtype=field.dtype)
+    made[..., :half], made[..., -half:] = spectrum[..., :half], spectrum[..., -half:]
+    return np.asarray(fft.ifft(made, norm="forward"))

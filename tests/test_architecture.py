@@ -30,6 +30,8 @@ DOWNWARD = [
     "pairing",
     "result",
     "task",
+    "features",
+    "passage",
     "ensemble",
     "study",
 ]
