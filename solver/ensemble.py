@@ -202,7 +202,8 @@ def run_round(task: RoundTask) -> RoundOutcome:
     start_s = time.perf_counter()
     bench = Bench(task.experiment)
     schedule, spent, findings = task.schedule, 0, None
-    blocks, sums = [], []
+    blocks: list[Real] = []
+    sums: list[Real] = []
     for chunk in chunks(task.experiment.ensemble.samples, task.first, task.count):
         launched = bench.passage.fields(chunk)
         found = []

@@ -12,20 +12,21 @@ from functools import cache
 from typing import Any
 
 import llvmlite.binding as llvm
-import numba
 import numpy as np
 from numba import njit
+from numba.core import config
 
 from solver.grid import Field, Real
 
 Kernel = Callable[..., Any]
 Floating = type[np.float32] | type[np.float64]
 
-if numba.config.CPU_NAME is None:
+_settings = vars(config)
+if _settings["CPU_NAME"] is None:
     # LLVM keeps to 256-bit vectors on processors that have longer ones, for the sake of programs
     # with little to do in them. These loops take half the time on the longer ones.
-    numba.config.CPU_NAME = llvm.get_host_cpu_name()
-    numba.config.CPU_FEATURES = f"{llvm.get_host_cpu_features().flatten()},-prefer-256-bit"
+    _settings["CPU_NAME"] = llvm.get_host_cpu_name()
+    _settings["CPU_FEATURES"] = f"{llvm.get_host_cpu_features().flatten()},-prefer-256-bit"
 
 
 @cache

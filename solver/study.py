@@ -331,8 +331,8 @@ class StudyState:
             if outcome.field is None:
                 return []
             part = task.part + 1
-            goes_on = {"field": outcome.field, "leg": outcome.leg}
-            return [replace(task, key=f"map-{part}", part=part, **goes_on)]
+            key = f"map-{part}"
+            return [replace(task, key=key, part=part, field=outcome.field, leg=outcome.leg)]
         assert isinstance(task, RoundTask)
         assert isinstance(outcome, RoundOutcome)
         return list(self.chains[task.variant, task.point].absorb(task, outcome))

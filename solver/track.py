@@ -79,7 +79,8 @@ class Wave:
     @property
     def field(self) -> Field:
         """The buffer, √W, (realizations, 2, samples): powers are right, phases once settled."""
-        return self.work.buffer
+        buffer: Field = self.work.buffer
+        return buffer
 
     def turn(self, own: float, other: float) -> None:
         """Put a Kerr turn off, rad/W by the own power and by that of the other component."""
@@ -191,7 +192,7 @@ class Track:
                 outwards = inside[1:half] & inside[:half:-1]
                 bins = half if outwards.all() else 1 + int(np.argmin(outwards))
             scaled = inside / self.grid.samples
-            made = {
+            made: dict[float, Field] = {
                 part: (np.exp(rate * (part * piece.step_km)) * scaled).astype(precision)
                 for part in set(scheme.linear)
             }
