@@ -104,7 +104,8 @@ class Blocks:
 
         With a control, what chance did to quantities whose expectation is known is taken out of
         the values: the regression on control variates (Lavenberg and Welch, Management Science
-        27, 322, 1981), done on the pseudo-values, its loss of degrees of freedom included.
+        27, 322, 1981), done on the pseudo-values. The jackknife then leaves groups out of the
+        regression too, by their leverages (Miller, Ann. Statist. 2, 880, 1974).
         """
         total, n = self.sums.sum(axis=0), self.counts.sum()
         value = function(total / n)
@@ -113,17 +114,19 @@ class Blocks:
             return Estimate(value, np.full_like(value, np.nan))
         left_out = (total - self.sums) / (n - self.counts)[:, None]
         deviations = self._deviations(value, function(left_out))
-        lost = 1
         if control is not None and groups >= FEWEST_CONTROLLED:
             known = control.function(total / n)
             regressors = self._deviations(known, control.function(left_out))
             # Controls that chance leaves alone, or that go together, have no say of their own.
-            factors = np.linalg.lstsq(regressors, deviations, rcond=1e-6)[0]
-            value = value - (known - control.expected) @ factors
-            deviations = deviations - regressors @ factors
-            lost += regressors.shape[1]
-        variance = np.mean(deviations**2, axis=0) * (groups - 1) / (groups - lost)
-        return Estimate(value, np.sqrt(variance))
+            inverse = np.linalg.pinv(regressors.T @ regressors, rcond=1e-9, hermitian=True)
+            factors = inverse @ regressors.T @ deviations
+            missed = control.expected - known
+            value = value + missed @ factors
+            leverage = np.sum(regressors @ inverse * regressors, axis=1)
+            reach = regressors @ inverse @ missed * groups / np.sqrt(groups - 1)
+            weight = (1.0 + reach) / np.maximum(1.0 - leverage * groups / (groups - 1), 1e-3)
+            deviations = (deviations - regressors @ factors) * weight[:, None]
+        return Estimate(value, np.sqrt(np.mean(deviations**2, axis=0)))
 
     def _deviations(self, value: Real, left_out: Real) -> Real:
         """Pseudo-values less their centre, scaled so that their mean square is the variance."""
