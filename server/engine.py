@@ -25,6 +25,30 @@ Condition = Literal["starting", "ready", "lost"]
 _log = logging.getLogger("crossdip.engine")
 _counter = itertools.count()
 _THREAD_CAPS = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "NUMBA_NUM_THREADS")
+_SETTINGS = {
+    # A lost worker is not the task's fault; a task that kills ten in a row is.
+    "distributed.scheduler.allowed-failures": 10,
+    "distributed.nanny.pre-spawn-environ": {
+        **dict.fromkeys(_THREAD_CAPS, 1),
+        # Every task needs the memory that the last one freed: a worker that gives it back to
+        # the system each time spends a quarter of its time on having it cleared again.
+        "MALLOC_ARENA_MAX": 1,
+        "MALLOC_MMAP_THRESHOLD_": 2**25,
+        "MALLOC_TOP_PAD_": 2**26,
+        "MALLOC_TRIM_THRESHOLD_": 2**30,
+    },
+    # Nothing of the cluster is to be read over HTTP, not even by this machine.
+    "distributed.scheduler.http.routes": [],
+    "distributed.worker.http.routes": [],
+    # Nobody looks at what it measures of itself.
+    "distributed.worker.profile.enabled": False,
+    "distributed.admin.system-monitor.gil.enabled": False,
+    "distributed.admin.system-monitor.disk": False,
+    "distributed.admin.system-monitor.interval": "10s",
+    "distributed.admin.tick.interval": "1s",
+    "distributed.scheduler.active-memory-manager.start": False,
+    "distributed.worker.memory.monitor-interval": "500ms",
+}
 _WATCH_INTERVAL_S = 0.5
 _RETRY_INTERVAL_S = 2.0
 _PATIENCE_S = 2.0
@@ -215,8 +239,12 @@ class Engine:
         else:
             if self._cluster is None:
                 self._cluster = await self._local_cluster(distributed)
+            _, within = self._cluster.scheduler.listeners
             self._client = await distributed.Client(
-                self._cluster, asynchronous=True, set_as_default=False
+                within.contact_address,
+                security=self._cluster.security,
+                asynchronous=True,
+                set_as_default=False,
             )
         if warm is not None and not self._foreign.address:
             await self._warm(warm)
@@ -252,17 +280,7 @@ class Engine:
         import dask
 
         logging.getLogger("distributed").setLevel(logging.ERROR)
-        dask.config.set(
-            {
-                # A lost worker is not the task's fault; a task that kills ten in a row is.
-                "distributed.scheduler.allowed-failures": 10,
-                "distributed.nanny.pre-spawn-environ.NUMBA_NUM_THREADS": 1,
-                "distributed.admin.system-monitor.gil.enabled": False,
-                # Nothing of the cluster is to be read over HTTP, not even by this machine.
-                "distributed.scheduler.http.routes": [],
-                "distributed.worker.http.routes": [],
-            }
-        )
+        dask.config.set(_SETTINGS)
         self._scratch.mkdir(parents=True, exist_ok=True)
         return await distributed.LocalCluster(
             n_workers=self._wanted_workers,
@@ -270,7 +288,13 @@ class Engine:
             processes=True,
             host="127.0.0.1",
             dashboard_address=None,
-            scheduler_kwargs={"dashboard": False, "dashboard_address": "127.0.0.1:0"},
+            scheduler_kwargs={
+                "dashboard": False,
+                "dashboard_address": "127.0.0.1:0",
+                # Workers come by TLS; the client lives in this process and needs no socket.
+                "protocol": ["tls", "inproc"],
+                "host": ["127.0.0.1", None],
+            },
             asynchronous=True,
             security=distributed.Security.temporary(),
             local_directory=str(self._scratch),
