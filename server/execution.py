@@ -21,10 +21,14 @@ from solver.study import MapRows, StudyState, execute
 from solver.task import Task
 
 _SETTLING_S = 1.0
-_SAVING_INTERVAL_S = 0.3
+_TELLING_INTERVAL_S = 0.1
+_SAVING_INTERVAL_S = 2.0
+"""What a crash of the server may cost."""
 
 T = TypeVar("T")
 Outcome = tuple[Task, Any]
+Place = tuple[int, int]
+"""Variant and point."""
 
 
 @dataclass(frozen=True)
@@ -76,8 +80,11 @@ class Execution:
         self._inbox: asyncio.Queue[Outcome | Exception] = asyncio.Queue()
         self._errands: set[asyncio.Task[None]] = set()
         self._outstanding = 0
-        self._unsaved: dict[tuple[int, int], Arrays] = {}
-        self._unsaved_some = asyncio.Event()
+        # The study's thread has these three to itself, as it has the state.
+        self._maps: list[dict[str, Any]] = []
+        self._untold: set[Place] = set()
+        self._unsaved: set[Place] = set()
+        self._changed = asyncio.Event()
         self._ending = asyncio.Event()
         self.live_map: dict[str, int] | None = None
 
@@ -91,33 +98,31 @@ class Execution:
     async def conduct(self) -> StudyResult:
         """Run to the end and return the result.
 
-        Raises what a task raised, or OSError when a checkpoint cannot be written. When it is
-        cancelled, tasks are withdrawn and every whole round taken in so far is on disk.
+        Raises what a task raised, or OSError when a checkpoint cannot be written. When it does
+        not come to its end, tasks are withdrawn and every whole round taken in is on disk.
         """
-        saver: asyncio.Task[None] | None = None
+        beside: list[asyncio.Task[None]] = []
         try:
             state, ready = await self._begin()
+            beside.append(asyncio.create_task(self._tell_as_it_changes(state)))
             if self._checkpoints is not None:
-                saver = asyncio.create_task(self._save_as_they_come())
+                beside.append(
+                    asyncio.create_task(self._save_now_and_then(state, self._checkpoints))
+                )
             self._hand_out(ready)
             while self._outstanding:
                 outcomes = await self._next_outcomes()
-                ready = await self._in_thread(self._absorb, state, outcomes)
-                self._hand_out(ready)
-                news = await self._in_thread(self._news, state, outcomes)
-                if self._unsaved:
-                    self._unsaved_some.set()
-                self._tell(news)
+                self._hand_out(await self._in_thread(self._absorb, state, outcomes))
+                self._changed.set()
             if not state.finished:
                 raise RuntimeError("the study ran out of tasks before it was finished")
-            return await self._in_thread(state.result)
+            return await self._in_thread(self._result, state)
         finally:
             for errand in self._errands:
                 errand.cancel()
-            if saver is not None:
-                self._ending.set()
-                self._unsaved_some.set()
-                await saver
+            self._ending.set()
+            self._changed.set()
+            await asyncio.gather(*beside)
 
     def close(self) -> None:
         """Give the thread up; nothing may be asked any more."""
@@ -131,7 +136,8 @@ class Execution:
                 await self._in_thread(state.restore, variant, point, arrays)
         ready = await self._in_thread(state.ready)
         self._state = state
-        self._tell(await self._in_thread(self._news_of_all, state))
+        self._untold.update(state.chains)
+        self._tell(await self._in_thread(self._news, state))
         return state, ready
 
     def _hand_out(self, tasks: list[Task]) -> None:
@@ -166,36 +172,31 @@ class Execution:
         ready: list[Task] = []
         for task, outcome in outcomes:
             ready += state.absorb(task, outcome)
-        return ready
-
-    def _news(self, state: StudyState, outcomes: list[Outcome]) -> News:
-        """Summaries and map rows of what was just taken in, checkpoints set aside."""
-        maps = []
-        changed = dict.fromkeys(place for task, _ in outcomes for place in state.touched(task))
-        for task, outcome in outcomes:
+            self._untold.update(state.touched(task))
+            self._unsaved.add((task.variant, task.point))
             rows = state.live_map_rows(task, outcome)
             if rows is not None:
                 self.live_map = {"variant": rows.variant, "point": rows.point}
-                maps.append(map_event(rows))
-        points = []
-        for variant, point in changed:
-            result = state.point(variant, point)
-            if result is not None:
-                points.append(result.summary())
-            if self._checkpoints is not None:
-                arrays = state.checkpoint(variant, point)
-                if arrays is not None:
-                    self._unsaved[variant, point] = arrays
-        return News(self._progress(state), points, maps)
+                self._maps.append(map_event(rows))
+        return ready
 
-    def _news_of_all(self, state: StudyState) -> News:
-        points = [
-            result.summary()
-            for variant in range(len(self._study.variants))
-            for point in range(self._study.sweep.points)
-            if (result := state.point(variant, point)) is not None
-        ]
-        return News(self._progress(state), points)
+    def _news(self, state: StudyState) -> News:
+        """What has not been told yet."""
+        maps, self._maps = self._maps, []
+        untold, self._untold = self._untold, set()
+        found = [result for place in untold if (result := state.point(*place)) is not None]
+        return News(self._progress(state), [result.summary() for result in found], maps)
+
+    def _result(self, state: StudyState) -> StudyResult:
+        # From here on the result is what there is to save.
+        self._unsaved.clear()
+        return state.result()
+
+    def _next_checkpoint(self, state: StudyState) -> tuple[Place, Arrays | None] | None:
+        if not self._unsaved:
+            return None
+        place = self._unsaved.pop()
+        return place, state.checkpoint(*place)
 
     def _progress(self, state: StudyState) -> dict[str, Any]:
         progress = state.progress()
@@ -207,20 +208,33 @@ class Execution:
             "seconds_left": rounded(self._pace.seconds_left(progress.fraction), 3),
         }
 
-    async def _save_as_they_come(self) -> None:
-        """Write checkpoints beside the work, now and then; a failure ends the run."""
-        assert self._checkpoints is not None
+    async def _tell_as_it_changes(self, state: StudyState) -> None:
+        last = False
+        while not last:
+            await self._changed.wait()
+            self._changed.clear()
+            last = self._ending.is_set()
+            self._tell(await self._in_thread(self._news, state))
+            await self._pause(_TELLING_INTERVAL_S)
+
+    async def _save_now_and_then(self, state: StudyState, checkpoints: Checkpoints) -> None:
+        """Write checkpoints beside the work, the last ones at its end; a failure ends the run."""
+        last = False
         try:
-            while not self._ending.is_set():
-                await self._unsaved_some.wait()
-                self._unsaved_some.clear()
-                while self._unsaved:
-                    place, arrays = self._unsaved.popitem()
-                    await asyncio.to_thread(self._checkpoints.save, *place, arrays)
-                with contextlib.suppress(TimeoutError):
-                    await asyncio.wait_for(self._ending.wait(), _SAVING_INTERVAL_S)
+            while not last:
+                await self._pause(_SAVING_INTERVAL_S)
+                last = self._ending.is_set()
+                while unsaved := await self._in_thread(self._next_checkpoint, state):
+                    place, arrays = unsaved
+                    if arrays is not None:
+                        await asyncio.to_thread(checkpoints.save, *place, arrays)
         except OSError as error:
             self._inbox.put_nowait(error)
+
+    async def _pause(self, duration_s: float) -> None:
+        """Wait, but not beyond the end of the work."""
+        with contextlib.suppress(TimeoutError):
+            await asyncio.wait_for(self._ending.wait(), duration_s)
 
     async def _in_thread(self, function: Callable[..., T], *values: Any) -> T:
         loop = asyncio.get_running_loop()

@@ -36,6 +36,7 @@ _RETRY_INTERVAL_S = 1.0
 class LiveRun:
     """What the server knows of the run under way without asking its study."""
 
+    study: Study
     execution: Execution
     feed: RunFeed
     library: Throttle
@@ -133,12 +134,14 @@ class Runs:
         """Stop a queued or running run at once; what it has is kept."""
         await self._record(run_id)
         live = self._live.get(run_id)
+        if live is not None and live.task is not None:
+            # First, so that what is on record is what is kept.
+            live.task.cancel()
+            await asyncio.wait([live.task])
         message = "Cancelled. Continue takes it up from what it has."
-        await self._step(run_id, "cancel", message, await self._counters(run_id))
+        await self._step(run_id, "cancel", message, self._counters(live))
         if run_id in self._queue:
             self._queue.remove(run_id)
-        if live is not None and live.task is not None:
-            live.task.cancel()
         return await self.row(run_id)
 
     async def resume(self, run_id: str) -> RunRow:
@@ -273,6 +276,7 @@ class Runs:
             return
         checkpoints = self._archive.checkpoints(run_id)
         live = LiveRun(
+            study,
             Execution(study, self._engine, partial(self._hear, run_id), checkpoints),
             RunFeed(self._board.log(run_id)),
             Throttle(_LIBRARY_INTERVAL_S, partial(self._announce_live, run_id)),
@@ -288,7 +292,7 @@ class Runs:
             # The title may have changed since the run began.
             record = await self._record(run_id, deleted=True)
             await asyncio.to_thread(self._archive.write, record, live.task.result())
-            await self._step(run_id, "finish", "", await self._counters(run_id))
+            await self._step(run_id, "finish", "", self._counters(live))
             self._archive.keep(await self._record(run_id, deleted=True), live.task.result())
             await asyncio.to_thread(checkpoints.remove)
         except IllegalTransition:
@@ -296,7 +300,7 @@ class Runs:
             return
         except Exception as error:
             _log.error("run %s failed", run_id, exc_info=error)
-            await self._step(run_id, "fail", explain(error), await self._counters(run_id))
+            await self._step(run_id, "fail", explain(error), self._counters(live))
         finally:
             live.task.cancel()
             await asyncio.gather(live.task, return_exceptions=True)
@@ -319,17 +323,14 @@ class Runs:
         live.feed.progress(news.progress)
         live.library.call()
 
-    async def _counters(self, run_id: str) -> Counters:
-        live = self._live.get(run_id)
+    def _counters(self, live: LiveRun | None) -> Counters:
         if live is None or live.progress is None:
             return {}
-        record = await self._record(run_id, deleted=True)
-        study = Study.model_validate_json(record.study)
         names = ("fraction", "realizations", "points_done", "points_total")
         return {
             **{name: live.progress[name] for name in names},
             "problems": live.problems,
-            "picture": draw(study, live.points),
+            "picture": draw(live.study, live.points),
         }
 
     async def _step(
