@@ -1,14 +1,16 @@
 """What a study has found, and the file that keeps it.
 
 The file is HDF5 and describes itself: the study as JSON in an attribute, axes with their units,
-and under ``variants/V/points/P`` every estimate as a pair ``value``, ``standard_error``.
+and under ``variants/V`` every estimate as a pair ``value``, ``standard_error``, with one row for
+each point that has been computed: ``point`` says which ones. Rows of points whose ``outcome`` is
+not ``completed`` hold no numbers. Nothing is compressed: that would take longer than all else.
 """
 
 import csv
 import io
 import json
 import os
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -24,7 +26,7 @@ from solver.statistics import CORRELATIONS, ESTIMATES, SPECTRA, Estimate, Layout
 MAP_ROWS = 64
 """Distances of an evolution map, the launch not counted."""
 MAP_COLUMNS = 1024
-FORMAT = "crossdip result 1"
+FORMAT = "crossdip result 2"
 
 
 @dataclass(frozen=True)
@@ -283,13 +285,10 @@ def _fill(file: h5py.File, result: StudyResult, title: str, created: str) -> Non
     for index, variant in enumerate(study.variants):
         group = file.create_group(f"variants/{index}")
         group.attrs.update({"name": variant.name, "changes": json.dumps(variant.changes)})
-        for point in result.points[index]:
-            if point is not None:
-                _fill_point(group.create_group(f"points/{point.point}"), point)
+        _fill_variant(group, [point for point in result.points[index] if point is not None])
 
 
 _SCALARS = (
-    "variant",
     "point",
     "realizations",
     "target_met",
@@ -304,29 +303,55 @@ _SCALARS = (
 )
 
 
-def _fill_point(group: h5py.Group, point: PointResult) -> None:
-    group.attrs.update({name: getattr(point, name) for name in _SCALARS})
+_LEVELS = (
+    "layer 0: contrast = level/127.5 - 1; layers 1, 2: power of component 1, 2 in W = "
+    "level * intensity_scale_w"
+)
+
+
+def _quantities(point: PointResult) -> Iterator[tuple[str, Any, str]]:
+    """Name in the file, value and unit of every number that was found of a point."""
     for name, estimate in point.estimates.items():
-        made = group.create_group(name)
         for part, values in estimate._asdict().items():
-            made.create_dataset(part, data=values).attrs["unit"] = ESTIMATES[name]
-    if point.linear is not None:
-        linear = group.create_group("linear_regime")
-        for name, values in vars(point.linear).items():
-            linear.create_dataset(name, data=values).attrs["unit"] = "1"
-    if point.difference is not None:
-        group.create_group("difference_from_first").attrs.update(vars(point.difference))
+            yield f"{name}/{part}", values, ESTIMATES[name]
+    for name, found in (
+        ("linear_regime", point.linear),
+        ("difference_from_first", point.difference),
+    ):
+        if found is not None:
+            for part, values in vars(found).items():
+                yield f"{name}/{part}", values, "1"
     if point.picture is not None:
-        made = group.create_dataset(
-            "map", data=point.picture.data, compression="gzip", compression_opts=1
-        )
-        made.attrs.update(
-            {
-                "intensity_scale_w": point.picture.intensity_scale_w,
-                "levels": "layer 0: contrast = level/127.5 - 1; layers 1, 2: power of component "
-                "1, 2 in W = level * intensity_scale_w",
-            }
-        )
+        yield "intensity_scale_w", point.picture.intensity_scale_w, "W"
+
+
+def _fill_variant(group: h5py.Group, points: Sequence[PointResult]) -> None:
+    for name in _SCALARS:
+        group.create_dataset(name, data=_column([getattr(point, name) for point in points]))
+    units: dict[str, str] = {}
+    stacked: dict[str, Real] = {}
+    for row, point in enumerate(points):
+        for name, values, unit in _quantities(point):
+            if name not in stacked:
+                units[name] = unit
+                stacked[name] = np.full((len(points), *np.shape(values)), np.nan)
+            stacked[name][row] = values
+    for name, rows in stacked.items():
+        group.create_dataset(name, data=rows).attrs["unit"] = units[name]
+    shown = {row: point.picture for row, point in enumerate(points) if point.picture is not None}
+    if shown:
+        shape = next(iter(shown.values())).data.shape
+        maps = group.create_dataset("map", (len(points), *shape), np.uint8)
+        maps.attrs["levels"] = _LEVELS
+        for row, picture in shown.items():
+            maps[row] = picture.data
+
+
+def _column(values: Sequence[Any]) -> np.ndarray:
+    if values and isinstance(values[0], str):
+        texts = [value.encode() for value in values]
+        return np.array(texts, h5py.string_dtype("utf-8", max(1, *map(len, texts))))
+    return np.array(values)
 
 
 def read_result(path: Path) -> StudyResult:
@@ -342,35 +367,65 @@ def read_result(path: Path) -> StudyResult:
         for index in range(len(study.variants)):
             group = file[f"variants/{index}"]
             row: list[PointResult | None] = [None] * study.sweep.points
-            for name, stored in group.get("points", {}).items():
-                row[int(name)] = _read_point(stored)
+            for found in _read_variant(index, group):
+                row[found.point] = found
             points.append(row)
     return StudyResult(study, points)
 
 
-def _read_point(group: h5py.Group) -> PointResult:
-    scalars = {
-        name: value.item() if isinstance(value := group.attrs[name], np.generic) else value
-        for name in _SCALARS
-    }
-    estimates = {
-        name: Estimate(group[name]["value"][()], group[name]["standard_error"][()])
-        for name in ESTIMATES
-        if name in group
-    }
+def _read_variant(variant: int, group: h5py.Group) -> Iterator[PointResult]:
+    columns: dict[str, np.ndarray] = {}
+
+    def read(name: str, item: h5py.Group | h5py.Dataset) -> None:
+        if isinstance(item, h5py.Dataset):
+            columns[name] = item[()]
+
+    group.visititems(read)
+    for row in range(len(columns["point"])):
+        yield _read_point(variant, {name: column[row] for name, column in columns.items()})
+
+
+def _read_point(variant: int, stored: Mapping[str, Any]) -> PointResult:
+    scalars = {name: _plain(stored[name]) for name in _SCALARS}
+    estimates = {}
+    if scalars["outcome"] == "completed":
+        estimates = {
+            name: Estimate(stored[f"{name}/value"], stored[f"{name}/standard_error"])
+            for name in ESTIMATES
+            if f"{name}/value" in stored
+        }
     linear = picture = difference = None
-    if "difference_from_first" in group:
-        stored = {k: v.item() for k, v in group["difference_from_first"].attrs.items()}
-        difference = Difference(**stored)
-    if "linear_regime" in group:
-        stored = {name: values[()] for name, values in group["linear_regime"].items()}
-        stored |= {name: float(stored[name]) for name in ("moment_cross", "launched")}
-        linear = LinearRegime(**stored)
-    if "map" in group:
-        picture = Picture(group["map"][()], float(group["map"].attrs["intensity_scale_w"]))
+    if _found(stored, "linear_regime/moment_cross"):
+        linear = LinearRegime(**_under(stored, "linear_regime"))
+    if _found(stored, "difference_from_first/realizations"):
+        parts = _under(stored, "difference_from_first")
+        difference = Difference(**{**parts, "realizations": round(parts["realizations"])})
+    if _found(stored, "intensity_scale_w"):
+        picture = Picture(stored["map"], _plain(stored["intensity_scale_w"]))
     return PointResult(
-        **scalars, estimates=estimates, linear=linear, difference=difference, picture=picture
+        variant=variant,
+        **scalars,
+        estimates=estimates,
+        linear=linear,
+        difference=difference,
+        picture=picture,
     )
+
+
+def _found(stored: Mapping[str, Any], name: str) -> bool:
+    return name in stored and bool(np.isfinite(stored[name]))
+
+
+def _under(stored: Mapping[str, Any], name: str) -> dict[str, Any]:
+    prefix = f"{name}/"
+    return {k.removeprefix(prefix): _plain(v) for k, v in stored.items() if k.startswith(prefix)}
+
+
+def _plain(value: Any) -> Any:
+    """A row as it was before it was written: an array, or a number or text of Python's."""
+    if isinstance(value, bytes):
+        return value.decode()
+    return value if np.ndim(value) else value.item()
 
 
 def curves_csv(result: StudyResult) -> str:

@@ -74,15 +74,19 @@ def test_the_file_describes_itself(state: StudyState, tmp_path: Path) -> None:
         assert Study.model_validate_json(file.attrs["study"]) == STUDY
         assert all("unit" in axis.attrs for axis in file["axes"].values())
         assert file["axes/sweep"].attrs["unit"] == "mW"
-        point = file["variants/0/points/0"]
+        curve = file["variants/0"]
+        assert list(curve["point"]) == [0, 2]
+        assert [text.decode() for text in curve["outcome"]] == ["completed", "aliased"]
         for name, unit in ESTIMATES.items():
-            assert point[name]["value"].attrs["unit"] == unit
-            assert point[name]["value"].shape == point[name]["standard_error"].shape
+            assert curve[name]["value"].attrs["unit"] == unit
+            assert curve[name]["value"].shape == curve[name]["standard_error"].shape
+            assert np.isfinite(curve[name]["value"][0]).all()
+            assert np.isnan(curve[name]["value"][1]).all()
         lengths = {name: axis.shape[0] for name, axis in file["axes"].items()}
-        assert point["cross/value"].shape == (lengths["lag_ps"],)
-        assert point["distance/value"].shape == (lengths["distance_km"],)
-        assert point["output1/value"].shape == (lengths["offset_ghz"],)
-        assert point["map"].shape == (3, lengths["map_distance_km"], lengths["map_time_ps"])
+        assert curve["cross/value"].shape == (2, lengths["lag_ps"])
+        assert curve["distance/value"].shape == (2, lengths["distance_km"])
+        assert curve["output1/value"].shape == (2, lengths["offset_ghz"])
+        assert curve["map"].shape == (2, 3, lengths["map_distance_km"], lengths["map_time_ps"])
 
 
 def test_a_disk_that_refuses_leaves_nothing(
