@@ -17,7 +17,9 @@ import psutil
 
 from solver.result import StudyResult, read_result
 
-SAMPLING_S = 0.05
+SAMPLING_S = 0.25
+"""Looking at every process of the machine takes time that the server would use."""
+POLLING_S = 0.05
 PATIENCE_S = 600
 
 
@@ -147,7 +149,7 @@ def served(workers: int) -> Iterator[tuple[Served, float]]:
                 port = int(line.rsplit(":", 1)[1].strip().strip("/"))
                 server = Served(port, process.pid)
                 while server.request("GET", "/healthz")["engine"] != "ready":
-                    time.sleep(SAMPLING_S)
+                    time.sleep(POLLING_S)
                 ready_s = time.perf_counter() - start_s
                 server.watch.start()
                 yield server, ready_s
