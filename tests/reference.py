@@ -28,9 +28,12 @@ def linear_flow(spectrum: Array, operator: Array) -> Array:
     return np.asarray(spectrum, dtype=np.complex128) * np.asarray(operator, dtype=np.complex128)
 
 
-def band_energy(spectrum: Array, first: int, last: int) -> Real:
-    """Energy of each realization in bins first to last − 1."""
-    return np.sum(np.abs(np.asarray(spectrum, np.complex128)[:, :, first:last]) ** 2, axis=(1, 2))
+def band_share(spectrum: Array, first: int, last: int) -> float:
+    """Largest share of a realization's energy in bins first to last − 1; nan if any is not."""
+    density = np.abs(np.asarray(spectrum, np.complex128)) ** 2
+    inside, whole = density[:, :, first:last].sum(axis=(1, 2)), density.sum(axis=(1, 2))
+    shares = [part / all_ if all_ > 0.0 else all_ for part, all_ in zip(inside, whole, strict=True)]
+    return float(np.max(shares)) if np.isfinite(whole).all() else float("nan")
 
 
 def column_powers(field: Array, columns: int) -> Real:
@@ -43,6 +46,53 @@ def intensity_moments(field: Array) -> Real:
     """Time means of I1, I2, I1², I2², I1·I2; shape (realizations, 5)."""
     i1, i2 = np.moveaxis(np.abs(np.asarray(field, dtype=np.complex128)) ** 2, 1, 0)
     return np.stack([np.mean(x, axis=1) for x in (i1, i2, i1 * i1, i2 * i2, i1 * i2)], axis=1)
+
+
+def smoothed_contrast(intensity: Real, width: int) -> Real:
+    """Contrast of running means over ``width`` samples; shape (realizations, samples)."""
+    samples = intensity.shape[2]
+    window = np.zeros(samples)
+    window[:width] = 1.0 / width
+    transfer = np.fft.rfft(np.roll(window, -(width // 2)))
+    smooth = np.fft.irfft(np.fft.rfft(np.asarray(intensity, np.float64)) * transfer, n=samples)
+    total = smooth[:, 0] + smooth[:, 1]
+    return np.asarray((smooth[:, 0] - smooth[:, 1]) / np.where(total > 0.0, total, 1.0))
+
+
+def wall_places(contrast: Real) -> list[Real]:
+    """Where each realization's periodic contrast changes sign, in samples."""
+    following = np.roll(contrast, -1, axis=1)
+    crossed = (contrast >= 0.0) != (following >= 0.0)
+    places = []
+    for row, after, where in zip(contrast, following, crossed, strict=True):
+        at = np.flatnonzero(where)
+        places.append(at + row[at] / (row[at] - after[at]))
+    return places
+
+
+def domain_counts(
+    intensity: Real, width: int, longest: float, contrast_counts: Real, walls: Real
+) -> None:
+    """Histogram of the contrast; number of walls and histogram of the durations between them."""
+    contrast = smoothed_contrast(intensity, width)
+    edges = np.linspace(0.0, longest, walls.shape[1])
+    for row, places in zip(walls, wall_places(contrast), strict=True):
+        row[0] += len(places)
+        if len(places) > 1:
+            durations = np.diff(places, append=places[0] + contrast.shape[1])
+            row[1:] += np.histogram(durations, edges)[0]
+    edges = np.linspace(-1.0, 1.0, contrast_counts.shape[1] + 1)
+    for row, values in zip(contrast_counts, contrast, strict=True):
+        row += np.histogram(np.clip(values, -1.0, 1.0), edges)[0]
+
+
+def map_levels(powers: Real, scale_w: float) -> npt.NDArray[np.uint8]:
+    """Levels of contrast and of both powers, rounded half up; shape (3, rows, columns)."""
+    first, second = np.moveaxis(powers, 1, 0)
+    total = first + second
+    contrast = (first - second) / np.where(total > 0.0, total, 1.0)
+    levels = [127.5 * (contrast + 1.0), first / scale_w, second / scale_w]
+    return np.minimum(np.floor(np.stack(levels) + 0.5), 255.0).astype(np.uint8)
 
 
 @dataclass(frozen=True)

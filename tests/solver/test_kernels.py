@@ -1,14 +1,21 @@
 """Every compiled kernel against its plain oracle of the same name."""
 
+import os
+import subprocess
+import sys
+from pathlib import Path
+
 import numpy as np
 import pytest
 
 from solver.kernels import (
-    band_energy,
+    band_share,
     column_powers,
+    domain_counts,
     intensity_moments,
     kerr_rotation,
     linear_flow,
+    map_levels,
 )
 from tests import reference
 
@@ -85,14 +92,43 @@ def test_linear_flow(dtype: type, real: type) -> None:
 
 
 @pytest.mark.parametrize(("dtype", "real"), PRECISIONS)
-@pytest.mark.parametrize(("first", "last"), [(0, 257), (100, 130), (5, 6)])
-def test_band_energy(dtype: type, real: type, first: int, last: int) -> None:
-    """Sums over the whole, a band and a single bin."""
+def test_equal_phases_turn_both_components_alike(dtype: type, real: type) -> None:
+    """The short way that Manakov coupling takes gives what unequal phases tend to."""
+    field = _fields(dtype)
+    alike, nearly = field.copy(), field.copy()
+    phase = real(0.9)
+    kerr_rotation(real)(alike, phase, phase)
+    kerr_rotation(real)(nearly, phase, np.nextafter(phase, real(1.0)))
+    expected = reference.kerr_rotation(field, float(phase), float(phase))
+    allowed = 40.0 * np.finfo(real).eps * np.abs(field.astype(np.complex128)).max()
+    assert np.abs(alike - expected).max() <= allowed
+    assert np.abs(alike - nearly).max() <= allowed
+
+
+@pytest.mark.parametrize(("dtype", "real"), PRECISIONS)
+@pytest.mark.parametrize(("first", "last"), [(0, 257), (100, 130), (5, 6), (0, 0), (250, 257)])
+def test_band_share(dtype: type, real: type, first: int, last: int) -> None:
+    """The whole, a band, a single bin, none: the largest of the realizations' shares."""
     spectrum = _fields(dtype)
-    expected = reference.band_energy(spectrum, first, last)
-    found = band_energy(spectrum, first, last)
-    assert found.dtype == np.float64
-    np.testing.assert_allclose(found, expected, rtol=300 * np.finfo(real).eps)
+    spectrum[1, :, 100:130] *= 3.0
+    expected = reference.band_share(spectrum, first, last)
+    found = band_share(spectrum, first, last)
+    assert found == pytest.approx(expected, rel=float(300 * np.finfo(real).eps))
+
+
+@pytest.mark.parametrize(("dtype", "real"), PRECISIONS)
+def test_band_share_lets_trouble_be_seen(dtype: type, real: type) -> None:
+    """NaN, infinity and overflow, inside the band and outside, in any realization; dark is 0."""
+    for bad in (np.nan, np.inf, 2.0 * np.sqrt(np.finfo(real).max)):
+        for realization, component, place in ((0, 0, 10), (2, 1, 100), (1, 0, 256)):
+            spectrum = _fields(dtype)
+            spectrum[realization, component, place] = bad
+            with np.errstate(over="ignore", invalid="ignore"):
+                assert np.isnan(band_share(spectrum, 90, 120))
+    dark = np.zeros((2, 2, 257), dtype=dtype)
+    assert band_share(dark, 90, 120) == reference.band_share(dark, 90, 120) == 0.0
+    dark[1, 0, 100] = 1.0
+    assert band_share(dark, 90, 120) == 1.0
 
 
 @pytest.mark.parametrize(("dtype", "real"), PRECISIONS)
@@ -111,3 +147,83 @@ def test_column_powers(dtype: type, real: type, columns: int) -> None:
     field = _fields(dtype, shape=(1, 2, 256))[0]
     found = column_powers(field, columns)
     np.testing.assert_allclose(found, reference.column_powers(field, columns), rtol=1e-13)
+
+
+@pytest.mark.parametrize("real", [np.float32, np.float64])
+@pytest.mark.parametrize("samples", [256, 257])
+@pytest.mark.parametrize("width", [1, 2, 5, 16, 255])
+def test_domain_counts(real: type, samples: int, width: int) -> None:
+    """Every wall and every duration of speckle, smoothed or not, counted as numpy counts them."""
+    power = np.abs(_fields(np.complex128, 9, (5, 2, samples))) ** 2
+    power = np.asarray(0.02 * power, dtype=real)
+    found = np.zeros((5, 50)), np.zeros((5, 41))
+    expected = np.zeros((5, 50)), np.zeros((5, 41))
+    domain_counts(power, width, 30.3, *found)
+    reference.domain_counts(power, width, 30.3, *expected)
+    np.testing.assert_array_equal(found[1], expected[1])
+    np.testing.assert_array_equal(found[0], expected[0])
+    assert (found[0].sum(axis=1) == samples).all()
+
+
+def test_domain_counts_of_one_wall_none_and_the_dark() -> None:
+    """A window all of one domain has no walls; two walls make two durations, one around the end;
+    a duration that is longer than the histogram counts as a wall only."""
+    power = np.ones((4, 2, 64))
+    power[0, 1] = 0.1
+    power[1, 0, 10:20] = 0.1
+    power[1, 1, 20:] = power[1, 1, :10] = 0.1
+    power[2] = 0.0
+    power[3, 0, :] = 0.0
+    for longest in (64.0, 16.0):
+        found = np.zeros((4, 50)), np.zeros((4, 9))
+        expected = np.zeros((4, 50)), np.zeros((4, 9))
+        domain_counts(power, 1, longest, *found)
+        reference.domain_counts(power, 1, longest, *expected)
+        np.testing.assert_array_equal(found[1], expected[1])
+        np.testing.assert_array_equal(found[0], expected[0])
+        assert list(found[1][:, 0]) == [0, 2, 0, 0]
+        assert found[1][1, 1:].sum() == (2 if longest == 64.0 else 1)
+        assert found[0][2, 25] == 64
+        assert found[0][3, 0] == 64
+
+
+def test_map_levels() -> None:
+    """Contrast and powers over their whole range, beyond its top, and in the dark."""
+    powers = np.random.default_rng(4).gamma(1.0, 0.05, size=(33, 2, 70))
+    powers[0], powers[1, 0], powers[2, 1] = 0.0, 0.0, 0.0
+    powers[3, :, :9] = 40.0
+    found = map_levels(powers, 1e-3)
+    assert found.dtype == np.uint8
+    np.testing.assert_array_equal(found, reference.map_levels(powers, 1e-3))
+    assert (found[0, 0] == 128).all()
+    assert (found[0, 1] == 0).all()
+    assert (found[0, 2] == 255).all()
+    assert (found[1:, 3, :9] == 255).all()
+
+
+def test_processors_without_wide_vectors_get_the_same_numbers(tmp_path: Path) -> None:
+    """Compiled for the plainest processor of this kind, every kernel still equals its oracle."""
+    kinds = "turns_by or equal or linear_flow or share or moments or powers or counts or levels"
+    plain = {
+        "NUMBA_CPU_NAME": "generic",
+        "NUMBA_CPU_FEATURES": "",
+        "NUMBA_CACHE_DIR": str(tmp_path),
+    }
+    probe = (
+        "import sys, pytest\n"
+        "from numba.core import config\n"
+        "import solver.kernels\n"
+        "assert (config.CPU_NAME, config.CPU_FEATURES) == ('generic', '')\n"
+        f"chosen = ['-k', {kinds!r}, {__file__!r}]\n"
+        "sys.exit(pytest.main(['-q', '-p', 'no:cacheprovider', *chosen]))"
+    )
+    done = subprocess.run(
+        [sys.executable, "-c", probe],
+        cwd=Path(__file__).parents[2],
+        env=os.environ | plain,
+        capture_output=True,
+        text=True,
+        timeout=300,
+    )
+    assert done.returncode == 0, done.stdout[-3000:] + done.stderr[-1000:]
+    assert done.stdout.count(".") >= 50

@@ -7,12 +7,13 @@ import pytest
 from scipy.special import dawsn
 
 from solver.experiment import Experiment, JsonValue, with_changes
+from solver.features import raw_correlations
 from solver.grid import Grid
 from solver.propagation import propagate
 from solver.receiver import detect
 from solver.relation import input_response
 from solver.source import draw, synthesize
-from solver.statistics import Blocks, Layout, central, raw_correlations
+from solver.statistics import Blocks, Layout, central
 from solver.theory import LinearCorrelations, linear_correlations
 from tests import reference
 
