@@ -4,6 +4,7 @@ Times are processor time of this process, which the rest of the machine disturbs
 """
 
 import importlib.util
+import math
 import time
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
@@ -14,16 +15,17 @@ from typing import Any, TypeVar
 
 import numpy as np
 
-from solver.ensemble import CHECKED, Bench, pilot, run_round
+from solver.ensemble import Bench, pilot, run_round
 from solver.experiment import Experiment, Precision, Study, with_changes
 from solver.grid import Field
-from solver.propagation import Propagation, propagate, relative_error
-from solver.result import StudyResult
-from solver.schemes import Scheme
-from solver.study import realizations_per_task
-from solver.task import RoundTask
-from solver.track import Light, Track
-from solver.transforms import batch_size, transforms
+from solver.passage import Passage
+from solver.propagation import Propagation, light_of, propagate, relative_error
+from solver.schemes import SECOND_ORDER, Scheme
+from solver.statistics import central
+from solver.study import Chain, StudyState, execute
+from solver.task import CHUNK, PILOTED, RoundTask, Schedule, Task
+from solver.track import Track, Wave
+from solver.transforms import COMPLEX, batch_size, batches, resampled, transforms
 
 PLAIN_ERROR = 1e-3
 """Field error to which the plain script computes a study."""
@@ -64,11 +66,28 @@ def _plain_fibre(plain: ModuleType, experiment: Experiment) -> Any:
     )
 
 
+def computed(study: Study) -> StudyState:
+    """A whole study carried out in this process, as a server does it."""
+    state = StudyState(study)
+    waiting: list[Task] = state.ready()
+    while waiting:
+        task = waiting.pop(0)
+        waiting += state.absorb(task, execute(task))
+    return state
+
+
 @dataclass(frozen=True)
 class PlainStudy:
-    """What the plain script takes for a study: processor time in s, and steps of its points."""
+    """What the plain script takes for a study.
+
+    cpu_s: processor time for the study's standard errors, in realizations; equal_cpu_s: with as
+    many realizations as the study took, study_realizations. Both over all points.
+    """
 
     cpu_s: float
+    realizations: int
+    equal_cpu_s: float
+    study_realizations: int
     fewest_steps: int
     most_steps: int
 
@@ -78,25 +97,40 @@ def _script(plain: ModuleType, fields: Field, time_step_ps: float, fibre: Any, s
     return float(plain.central_correlation(seen))
 
 
-def plain_study(plain: ModuleType, result: StudyResult, realizations: int) -> PlainStudy:
-    """Time the plain script on some realizations of each point, scaled to all of them.
+def _more_realizations(chain: Chain) -> float:
+    """How many times the study's realizations its standard error takes without a control."""
+    last = slice(5 * (chain.layout.distances - 1), 5 * chain.layout.distances)
+    alone = chain.blocks.estimate(lambda means: central(means[..., last])[..., None])
+    return float(alone.standard_error[0] / chain.standard_error()) ** 2
 
-    It is given the study's light, and the time step that the study chose for each point; the
-    search for its steps is not charged.
+
+def plain_study(plain: ModuleType, state: StudyState, timed_realizations: int) -> PlainStudy:
+    """Time the plain script on some realizations of each point, scaled to those it needs.
+
+    It is given the study's light on the widest grid that the study took it to; the search for
+    its steps is not charged. The script averages what it sees, so it needs more realizations for
+    the same standard error: how many more is read off the study's own realizations.
     """
-    total_s = 0.0
+    cpu_s = equal_cpu_s = 0.0
+    needed = 0
     chosen = []
-    for found in (point for curve in result.points for point in curve if point is not None):
-        experiment = result.study.experiment_at(found.variant, found.point)
-        bench = Bench(experiment, found.refinement, ())
-        fields, fibre = bench.fields(range(realizations)), _plain_fibre(plain, experiment)
-        step_ps = bench.grid.time_step_ps
+    for chain in state.chains.values():
+        if chain.findings is None:
+            continue
+        passage = Passage(chain.experiment, 1)
+        samples = max(leg.samples for leg in chain.findings.schedule)
+        fields = resampled(passage.fields(range(timed_realizations)), samples)
+        fibre, step_ps = _plain_fibre(plain, chain.experiment), passage.grid(samples).time_step_ps
         steps, _ = plain.steps_for(fields[0], step_ps, fibre, PLAIN_ERROR)
 
         _, taken_s = timed(_script, plain, fields, step_ps, fibre, steps)
-        total_s += taken_s / realizations * found.realizations
+        more = math.ceil(chain.realizations * _more_realizations(chain))
+        needed += more
+        cpu_s += taken_s / timed_realizations * more
+        equal_cpu_s += taken_s / timed_realizations * chain.realizations
         chosen.append(steps)
-    return PlainStudy(total_s, min(chosen), max(chosen))
+    taken = state.progress().realizations
+    return PlainStudy(cpu_s, needed, equal_cpu_s, taken, min(chosen), max(chosen))
 
 
 def at_power(power_mw: float, **ensemble: Any) -> Experiment:
@@ -129,12 +163,15 @@ def resolved_line(
     power_mw: float, realizations: int, tolerance: float, precision: Precision
 ) -> Line:
     """A line whose window has as many samples as the tolerance needs."""
-    for refinement in (1, 2, 4, 8):
-        experiment = at_power(power_mw, precision=precision)
-        bench = Bench(experiment, refinement, ())
-        line = Line(experiment, bench.fields(range(realizations)), bench.grid.time_step_ps)
+    experiment = at_power(power_mw, precision=precision)
+    passage = Passage(experiment, 1)
+    samples = passage.start_samples
+    while samples <= 2 * passage.widest:
+        fields = resampled(passage.fields(range(realizations)), samples)
+        line = Line(experiment, fields, passage.grid(samples).time_step_ps)
         if line.propagate(tolerance, precision).outcome.kind == "completed":
             return line
+        samples *= 2
     raise RuntimeError(f"no grid holds {power_mw:g} mW to {tolerance:g}")
 
 
@@ -181,10 +218,9 @@ def _bare_s(realizations: int, samples: int, precision: Precision, count: int) -
 
 def over_transforms(power_mw: float, tolerance: float, precision: Precision) -> tuple[float, int]:
     """Time of a whole propagation of a full batch over that of its transforms; their number."""
-    realizations = batch_size(at_power(power_mw).ensemble.samples)
-    line = resolved_line(power_mw, realizations, tolerance, precision)
+    line = resolved_line(power_mw, PILOTED, tolerance, precision)
     samples = line.fields.shape[2]
-    realizations = batch_size(samples)
+    realizations = min(PILOTED, batch_size(samples))
     line = Line(line.experiment, line.fields[:realizations], line.time_step_ps)
     out = line.propagate(tolerance, precision)
     ratios = []
@@ -194,23 +230,55 @@ def over_transforms(power_mw: float, tolerance: float, precision: Precision) -> 
     return median(ratios), out.transforms
 
 
-def round_over_transforms(power_mw: float) -> float:
-    """Time of a later task of a study, draws and estimators included, over its transforms."""
+@dataclass(frozen=True)
+class Later:
+    """A task of a study after its first, ready to be timed: its schedule is known."""
+
+    task: RoundTask
+    schedule: Schedule
+    passage: Passage
+
+    def _bare_s(self) -> float:
+        precision, total_s = self.passage.precision, 0.0
+        for batch in self._batches():
+            for index, leg in enumerate(self.schedule):
+                steps = sum(piece.steps for piece in self.passage.pieces(leg)[index])
+                count = steps * self.passage.scheme.transforms_per_step
+                total_s += _bare_s(len(batch), leg.samples, precision, count)
+        return total_s
+
+    def _batches(self) -> list[range]:
+        task = self.task
+        rows = range(task.first, task.first + task.count)
+        return list(batches(rows, max(leg.samples for leg in self.schedule)))
+
+    def over_transforms(self) -> tuple[float, float]:
+        """Times over those of the transforms: of the fields' way alone, and of the whole task."""
+        alone, whole = [], []
+        launched = [self.passage.fields(batch) for batch in self._batches()]
+
+        def travel() -> None:
+            for fields in launched:
+                self.passage.travel(fields, self.schedule)
+
+        travel()  # makes the operators
+        for _ in range(REPEATS):
+            bare_s = self._bare_s()
+            alone.append(timed(travel)[1] / bare_s)
+            whole.append(timed(run_round, self.task)[1] / bare_s)
+        return median(alone), median(whole)
+
+
+def later_task(power_mw: float) -> Later:
+    """A chunk of realizations of the headline study at one power."""
     experiment = at_power(power_mw)
-    samples = experiment.ensemble.samples
-    count = realizations_per_task(samples)
-    first = RoundTask("first", 0, 0, 0, experiment, 0, count, refinement=1, steps=None)
+    first = RoundTask("first", 0, 0, 0, experiment, 0, CHUNK, schedule=None)
     found = run_round(first).findings
     if found is None:
-        raise RuntimeError(f"the steps at {power_mw:g} mW were not found on the coarsest grid")
-    task = RoundTask("later", 0, 0, 0, experiment, count, count, refinement=1, steps=found.steps)
-    batches = -(-count // batch_size(samples))
-    bare = run_round(task).transforms * batches
-    ratios = []
-    for _ in range(REPEATS):
-        _, whole_s = timed(run_round, task)
-        ratios.append(whole_s / _bare_s(batch_size(samples), samples, "single", bare))
-    return median(ratios)
+        raise RuntimeError(f"no schedule was found at {power_mw:g} mW")
+    task = RoundTask("later", 0, 0, 0, experiment, CHUNK, CHUNK, schedule=found.schedule)
+    run_round(task)  # loads what only the first task of a process has to
+    return Later(task, found.schedule, Passage(experiment, experiment.ensemble.distances))
 
 
 @dataclass(frozen=True)
@@ -225,40 +293,31 @@ class Rung:
 class Ladder:
     """Runs of one field down one line with ever more steps, held against a very fine one."""
 
-    def __init__(self, power_mw: float, refinement: int, finest: Scheme, finest_steps: int):
-        self._bench = Bench(at_power(power_mw, precision="double"), refinement, ())
-        self._fields = self._bench.fields(range(1))
-        self._light: Light = self._bench.light
-        self._uniform = self._track(())
+    def __init__(self, power_mw: float, samples: int, finest: Scheme, finest_steps: int):
+        self._passage = Passage(at_power(power_mw, precision="double"), 1)
+        self._samples = samples
+        self._fields = resampled(self._passage.fields(range(1)), samples)
+        self._uniform = self._passage.track(samples)
         self.truth, _ = self._march(self._uniform, finest, "double", finest_steps)
-
-    def _track(self, recorded_km: Sequence[float]) -> Track:
-        experiment = self._bench.experiment
-        return Track(
-            experiment.line,
-            self._bench.grid,
-            wavelength_nm=experiment.source.wavelength_nm,
-            recorded_km=recorded_km,
-        )
 
     def _march(
         self, track: Track, scheme: Scheme, precision: Precision, steps: float
     ) -> tuple[Field, int]:
-        work = transforms(1, self._bench.grid.samples, precision)
-        pieces = track.pieces(scheme, self._light, steps)
-        work.buffer[:] = self._fields
-        outcome = track.march(work, pieces, scheme, precision, edge_limit=1.0)
+        weights = track.weights(scheme, light_of(self._fields))
+        pieces = track.pieces(weights, steps)
+        wave = Wave(self._fields.astype(COMPLEX[precision]))
+        outcome = track.march(wave, pieces, scheme, edge_limit=1.0)
         if outcome.kind != "completed":
             raise RuntimeError(outcome.advice)
+        wave.settle()
         taken = sum(piece.steps for piece in pieces)
-        return work.buffer.copy(), taken * scheme.transforms_per_step
+        return wave.field.copy(), taken * scheme.transforms_per_step
 
     def rungs(
         self, scheme: Scheme, precision: Precision, steps: Sequence[int], parts: int = 1
     ) -> list[Rung]:
         """Runs with these numbers of steps, shared over equal parts of the line."""
-        length = self._bench.experiment.length_km
-        track = self._track([length * (i + 1) / parts for i in range(parts)])
+        track = self._passage.watched(parts).track(self._samples)
         made = []
         for count in steps:
             self._march(track, scheme, precision, count)  # makes the operators
@@ -270,7 +329,8 @@ class Ladder:
 
     def plain_rungs(self, plain: ModuleType, steps: Sequence[int]) -> list[Rung]:
         """The same of the plain script."""
-        fibre, step_ps = _plain_fibre(plain, self._bench.experiment), self._bench.grid.time_step_ps
+        fibre = _plain_fibre(plain, self._passage.experiment)
+        step_ps = self._passage.grid(self._samples).time_step_ps
         made = []
         for count in steps:
             field, taken_s = timed(plain.propagate, self._fields[0], step_ps, fibre, count)
@@ -293,28 +353,39 @@ def transforms_at(error: float, rungs: Sequence[Rung]) -> float:
 
 def step_s(samples: int, steps: int) -> float:
     """Processor time of one second-order step of one realization of this many samples, s."""
-    window_ps = 2.0 * samples
-    experiment = at_power(200.0, samples=samples, window_ps=window_ps)
-    bench = Bench(experiment, 1, ())
-    fields = bench.fields(range(batch_size(samples)))
-    pieces = bench.pieces(steps)
-    taken = sum(piece.steps for piece in pieces)
-    work = bench.work(len(fields))
+    passage = Passage(at_power(200.0, samples=samples, window_ps=2.0 * samples), 1)
+    fields = resampled(passage.fields(range(batch_size(samples))), samples)
+    track = passage.track(samples)
+    pieces = track.pieces(np.ones(1), steps)
 
     def march() -> None:
-        work.buffer[:] = fields
-        bench.track.march(work, pieces, bench.scheme, bench.precision, edge_limit=1.0)
+        track.march(Wave(fields), pieces, SECOND_ORDER, edge_limit=1.0)
 
     march()
-    return min(timed(march)[1] for _ in range(3)) / taken / len(fields)
+    return min(timed(march)[1] for _ in range(3)) / steps / len(fields)
 
 
-def steps_found(power_mw: float, length_km: float) -> tuple[int, float]:
-    """Steps that an ensemble takes down the headline fibre, and its time step in ps."""
-    experiment = with_changes(at_power(power_mw, distances=1), {"line.*.length_km": length_km})
-    for refinement in (1, 2, 4):
-        bench = Bench(experiment, refinement, [length_km])
-        found = pilot(bench, bench.fields(range(CHECKED)), fewest=1)
-        if found.outcome.kind == "completed":
-            return found.steps, bench.grid.time_step_ps
-    raise RuntimeError(f"no grid holds {power_mw:g} mW over {length_km:g} km")
+@dataclass(frozen=True)
+class Found:
+    """What an ensemble takes: steps, samples at both ends of the line, processor time in s."""
+
+    steps: int
+    first_samples: int
+    last_samples: int
+    realization_s: float
+
+
+def found_steps(power_mw: float, length_km: float) -> Found:
+    """What the headline fibre takes of steps, samples and time at one power and length."""
+    experiment = with_changes(at_power(power_mw), {"line.*.length_km": length_km})
+    bench = Bench(experiment)
+    launched = bench.passage.fields(range(PILOTED))
+    found = pilot(bench, launched)
+    if found.outcome.kind != "completed":
+        raise RuntimeError(found.outcome.advice)
+    schedule = found.schedule
+    bench.passage.travel(launched, schedule)  # makes the operators
+    taken_s = min(timed(bench.passage.travel, launched, schedule)[1] for _ in range(3))
+    return Found(
+        bench.passage.steps(schedule), schedule[0].samples, schedule[-1].samples, taken_s / PILOTED
+    )

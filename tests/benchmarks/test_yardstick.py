@@ -33,7 +33,7 @@ def test_without_the_source_tree_there_is_no_script(
 
 def test_a_ladder_falls_with_the_order_of_its_scheme() -> None:
     """Solver and script are held against the same truth, far below single precision."""
-    ladder = yardstick.Ladder(50.0, 1, FOURTH_ORDER, 1024)
+    ladder = yardstick.Ladder(50.0, 4096, FOURTH_ORDER, 1024)
     plain = yardstick.plain_script()
     for rungs, order in (
         (ladder.rungs(SECOND_ORDER, "double", [256, 512]), 2),
