@@ -1,26 +1,45 @@
-"""The Fourier transforms of a propagation, behind one small interface.
+"""The Fourier transforms of a propagation, behind one small interface with two providers.
+
+FFTW is used wherever pyFFTW is installed; without it scipy does the same more slowly.
 
 FFTW's fast plans come from timing candidates, and two plans may differ in the last bit. A
 study must give the same bits on every worker, so a plan is made once on a machine and kept in
 the user's cache folder as FFTW "wisdom"; whoever comes second uses the first one's plan.
 """
 
+import logging
 import os
 import pickle
 import tempfile
-from collections.abc import Iterator
+from collections.abc import Callable, Iterable, Iterator
 from functools import lru_cache
 from pathlib import Path
-from typing import Any
+from typing import Any, Protocol
 
 import llvmlite.binding as llvm
 import numpy as np
-import pyfftw
 from scipy import fft
 
 from solver.experiment import Precision
 from solver.grid import Field
 
+try:
+    import pyfftw
+except ImportError:
+    pyfftw = None
+
+PLANNED = pyfftw is not None
+"""Whether transforms are planned by FFTW, and not left to scipy."""
+UNPLANNED_COST = (
+    "pyFFTW is not installed: with scipy's transforms propagation takes about three times as "
+    "long (to mend it: pip install pyfftw)"
+)
+"""What to tell whoever starts a process that is not :data:`PLANNED`."""
+if not PLANNED:
+    logging.getLogger(__name__).warning(UNPLANNED_COST)
+
+Shape = tuple[int, int, Precision]
+"""Realizations, samples and precision of a batch."""
 COMPLEX: dict[Precision, type[np.complexfloating[Any, Any]]] = {
     "single": np.complex64,
     "double": np.complex128,
@@ -45,23 +64,56 @@ def batches(rows: range, samples: int) -> Iterator[range]:
         start += size
 
 
-def _cache_folder() -> Path:
-    base = os.environ.get("XDG_CACHE_HOME") or Path.home() / ".cache"
-    return Path(base) / "crossdip" / "wisdom"
-
-
-class Transforms:
+class Transforms(Protocol):
     """In-place transforms of ``buffer``, complex, shape (realizations, 2, samples).
 
     Neither direction is scaled: forward then inverse multiplies by ``samples``.
     """
 
+    @property
+    def buffer(self) -> Field:
+        """What is transformed, always the same memory."""
+
+    def forward(self) -> None:
+        """Time to frequency, e^{−iωt}."""
+
+    def inverse(self) -> None:
+        """Frequency to time, times ``samples``."""
+
+
+class ScipyTransforms:
+    """:class:`Transforms` by scipy.fft, which needs no plans and makes the same bits anywhere."""
+
+    def __init__(self, realizations: int, samples: int, precision: Precision) -> None:
+        self.buffer: Field = np.zeros((realizations, 2, samples), dtype=COMPLEX[precision])
+
+    def forward(self) -> None:
+        """Time to frequency, e^{−iωt}."""
+        self._keep(fft.fft(self.buffer, overwrite_x=True, workers=1))
+
+    def inverse(self) -> None:
+        """Frequency to time, times ``samples``."""
+        self._keep(fft.ifft(self.buffer, norm="forward", overwrite_x=True, workers=1))
+
+    def _keep(self, found: Field) -> None:
+        # scipy may overwrite its input with the result, but does not promise to.
+        if not np.may_share_memory(found, self.buffer):
+            self.buffer[:] = found
+
+
+def _wisdom_file(realizations: int, samples: int, precision: Precision) -> Path:
+    base = os.environ.get("XDG_CACHE_HOME") or Path.home() / ".cache"
+    name = f"{llvm.get_host_cpu_name()}-{pyfftw.__version__}-{precision}-{realizations}x{samples}"
+    return Path(base) / "crossdip" / "wisdom" / name
+
+
+class PlannedTransforms:
+    """:class:`Transforms` by FFTW, with the plan that all processes of this machine share."""
+
     def __init__(self, realizations: int, samples: int, precision: Precision) -> None:
         shape = (realizations, 2, samples)
-        self.buffer = pyfftw.zeros_aligned(shape, dtype=COMPLEX[precision])
-        wisdom = _cache_folder() / (
-            f"{llvm.get_host_cpu_name()}-{pyfftw.__version__}-{precision}-{realizations}x{samples}"
-        )
+        self.buffer: Field = pyfftw.zeros_aligned(shape, dtype=COMPLEX[precision])
+        wisdom = _wisdom_file(realizations, samples, precision)
         if not self._adopt(wisdom):
             pyfftw.forget_wisdom()
             self._plan("FFTW_MEASURE")
@@ -107,10 +159,41 @@ def _publish(wisdom: Path) -> bool:
     return True
 
 
+PROVIDER: Callable[[int, int, Precision], Transforms] = (
+    PlannedTransforms if PLANNED else ScipyTransforms
+)
+"""Makes all transforms of this process."""
+
+
 @lru_cache(maxsize=16)
 def transforms(realizations: int, samples: int, precision: Precision) -> Transforms:
-    """The planned transforms of a shape, one set per process: not to be held across calls."""
-    return Transforms(realizations, samples, precision)
+    """The transforms of a shape, one set per process: not to be held across calls."""
+    return PROVIDER(realizations, samples, precision)
+
+
+def usual_shapes(narrowest: int, widest: int, precision: Precision, piloted: int) -> list[Shape]:
+    """Every shape on grids of ``narrowest`` to ``widest`` samples, the quickest to plan first.
+
+    piloted: realizations that a pilot keeps together on any grid.
+    """
+    shapes: list[Shape] = []
+    samples = narrowest
+    while samples <= widest:
+        most = max(batch_size(samples), piloted)
+        shapes += [(2**n, samples, precision) for n in range(most.bit_length())]
+        samples *= 2
+    return sorted(shapes, key=lambda shape: shape[0] * shape[1])
+
+
+def plan_ahead(shapes: Iterable[Shape]) -> None:
+    """See to it that this machine has plans of these shapes, which takes some 0.5 s for each new.
+
+    Without planned transforms, or a cache folder that can be written, there is nothing to gain.
+    """
+    if PLANNED:
+        for shape in shapes:
+            if not _wisdom_file(*shape).exists():
+                PlannedTransforms(*shape)
 
 
 def resampled(field: Field, samples: int) -> Field:

@@ -1,26 +1,121 @@
-"""The FFT provider: convention, and one plan for all processes of a machine."""
+"""The FFT providers: convention, one plan for all processes of a machine, and doing without."""
 
+import json
+import subprocess
+import sys
 from pathlib import Path
 
 import numpy as np
 import pytest
 
-from solver.experiment import Precision
-from solver.transforms import MOST_TOGETHER, Transforms, batch_size
+from solver.experiment import Precision, Study
+from solver.study import StudyState, execute
+from solver.transforms import (
+    MOST_TOGETHER,
+    PLANNED,
+    PlannedTransforms,
+    ScipyTransforms,
+    Transforms,
+    batch_size,
+    batches,
+    plan_ahead,
+    usual_shapes,
+)
 from tests import reference
 
+SMALL_STUDY = {
+    "experiment": {
+        "ensemble": {
+            "samples": 1024,
+            "window_ps": 2048.0,
+            "distances": 4,
+            "min_realizations": 16,
+            "max_realizations": 16,
+        }
+    },
+    "sweep": {"points": 2, "start": 20.0, "stop": 200.0},
+    "variants": [{"name": "only"}],
+}
+CENTRALS = """
+import json, sys
+sys.modules["pyfftw"] = None
+from tests.solver.test_transforms import centrals
+print(json.dumps(centrals()))
+"""
 
+
+def centrals() -> list[tuple[float, float]]:
+    """C12(0) and its standard error at each point of a small study, computed in this process."""
+    state = StudyState(Study.model_validate(SMALL_STUDY))
+    waiting = state.ready()
+    while waiting:
+        task = waiting.pop()
+        waiting += state.absorb(task, execute(task))
+    return [point.central for point in state.result().points[0]]
+
+
+@pytest.mark.parametrize("provider", [PlannedTransforms, ScipyTransforms])
 @pytest.mark.parametrize(("precision", "rounding"), [("single", 1e-6), ("double", 1e-14)])
 @pytest.mark.parametrize("samples", [256, 1000])
-def test_convention(precision: Precision, rounding: float, samples: int) -> None:
-    """numpy's forward transform; forward and inverse multiply by the samples."""
+def test_convention(
+    provider: type[Transforms], precision: Precision, rounding: float, samples: int
+) -> None:
+    """numpy's forward transform; forward and inverse multiply by the samples; all in place."""
     field = reference.stirred_light(1, 3, samples, 1.0, 0.1, 1.0)
-    work = Transforms(3, samples, precision)
-    work.buffer[:] = field
+    work = provider(3, samples, precision)
+    buffer = work.buffer
+    buffer[:] = field
     work.forward()
-    assert reference.relative_l2(work.buffer, np.fft.fft(field)) < rounding
+    assert reference.relative_l2(buffer, np.fft.fft(field)) < rounding
     work.inverse()
-    assert reference.relative_l2(work.buffer / samples, field) < rounding
+    assert reference.relative_l2(buffer / samples, field) < rounding
+    assert work.buffer is buffer
+    assert buffer.dtype == (np.complex64 if precision == "single" else np.complex128)
+
+
+def test_a_study_without_pyfftw_says_so_and_finds_the_same() -> None:
+    """One line that tells the cost, and a result equal to within single precision."""
+    assert PLANNED
+    without = subprocess.run(
+        [sys.executable, "-c", CENTRALS],
+        cwd=Path(__file__).parents[2],
+        capture_output=True,
+        text=True,
+        check=True,
+    )
+    (line,) = without.stderr.splitlines()
+    assert "pip install pyfftw" in line
+    np.testing.assert_allclose(json.loads(without.stdout), centrals(), atol=1e-5)
+
+
+def test_a_provider_may_hand_back_other_memory(monkeypatch: pytest.MonkeyPatch) -> None:
+    """scipy overwrites its input as a favour; the buffer holds the result without it, too."""
+    field = reference.stirred_light(1, 1, 256, 1.0, 0.1, 1.0)
+    work = ScipyTransforms(1, 256, "double")
+    work.buffer[:] = field
+    monkeypatch.setattr("solver.transforms.fft.fft", lambda x, **_: np.fft.fft(x))
+    work.forward()
+    assert reference.relative_l2(work.buffer, np.fft.fft(field)) < 1e-14
+
+
+def test_plans_made_ahead_are_the_ones_used(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Every batch of a grid has its shape in the list; a second call changes no file."""
+    monkeypatch.setenv("XDG_CACHE_HOME", str(tmp_path))
+    shapes = usual_shapes(64, 128, "single", piloted=4)
+    assert {(len(rows), 64, "single") for rows in batches(range(15), 64)} <= set(shapes)
+    assert (4, 2**20, "double") in usual_shapes(2**20, 2**20, "double", piloted=4)
+    plan_ahead(shapes)
+
+    def kept() -> dict[str, bytes]:
+        return {path.name: path.read_bytes() for path in tmp_path.rglob("*") if path.is_file()}
+
+    plans = kept()
+    assert len(plans) == len(shapes)
+    plan_ahead(shapes)
+    PlannedTransforms(8, 128, "single")
+    assert kept() == plans
 
 
 def test_one_plan_for_all(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
@@ -29,7 +124,7 @@ def test_one_plan_for_all(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> No
     field = reference.stirred_light(1, 2, 1024, 1.0, 0.1, 1.0)
     bits = set()
     for _ in range(3):
-        work = Transforms(2, 1024, "single")
+        work = PlannedTransforms(2, 1024, "single")
         work.buffer[:] = field
         work.forward()
         bits.add(work.buffer.tobytes())
@@ -44,7 +139,7 @@ def test_a_spoilt_or_missing_cache_is_done_without(
 ) -> None:
     """An unreadable plan, or a folder that cannot be made, costs speed and nothing else."""
     monkeypatch.setenv("XDG_CACHE_HOME", str(tmp_path))
-    Transforms(1, 256, "double")
+    PlannedTransforms(1, 256, "double")
     (kept,) = [path for path in tmp_path.rglob("*") if path.is_file()]
     kept.write_bytes(content)
     field = reference.stirred_light(1, 1, 256, 1.0, 0.1, 1.0)
@@ -52,7 +147,7 @@ def test_a_spoilt_or_missing_cache_is_done_without(
     blocked.write_text("")
     for home in (tmp_path, blocked):
         monkeypatch.setenv("XDG_CACHE_HOME", str(home))
-        work = Transforms(1, 256, "double")
+        work = PlannedTransforms(1, 256, "double")
         work.buffer[:] = field
         work.forward()
         assert reference.relative_l2(work.buffer, np.fft.fft(field)) < 1e-14
