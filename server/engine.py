@@ -35,7 +35,7 @@ _SETTINGS = {
         "MALLOC_ARENA_MAX": 1,
         "MALLOC_MMAP_THRESHOLD_": 2**25,
         "MALLOC_TOP_PAD_": 2**26,
-        "MALLOC_TRIM_THRESHOLD_": 2**30,
+        "MALLOC_TRIM_THRESHOLD_": 2**28,
     },
     # Nothing of the cluster is to be read over HTTP, not even by this machine.
     "distributed.scheduler.http.routes": [],
@@ -46,6 +46,7 @@ _SETTINGS = {
     "distributed.admin.system-monitor.disk": False,
     "distributed.admin.system-monitor.interval": "10s",
     "distributed.admin.tick.interval": "1s",
+    # Results leave at once, so there is neither much to move about nor to watch closely.
     "distributed.scheduler.active-memory-manager.start": False,
     "distributed.worker.memory.monitor-interval": "500ms",
 }

@@ -2,6 +2,7 @@
 
 import asyncio
 import os
+import resource
 import socket
 import subprocess
 import sys
@@ -10,6 +11,7 @@ from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from server.engine import Engine
@@ -25,6 +27,18 @@ def _fail() -> None:
 def _environment_of_worker() -> dict[str, str | None]:
     names = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "NUMBA_NUM_THREADS")
     return {name: os.environ.get(name) for name in names}
+
+
+PAGES_OF_ONE_ARRAY = 2**24 // resource.getpagesize()
+
+
+def _pages_asked_of_the_system() -> int:
+    """For the tenth array and the following of a row that are each given up at once."""
+    for count in range(20):
+        if count == 10:
+            before = resource.getrusage(resource.RUSAGE_SELF).ru_minflt
+        np.ones(2**24, np.uint8)
+    return resource.getrusage(resource.RUSAGE_SELF).ru_minflt - before
 
 
 @contextmanager
@@ -99,6 +113,7 @@ def test_own_workers_are_capped_failures_come_through_and_cancelled_tasks_go(
         engine.start()
         try:
             assert set((await engine.run(_environment_of_worker)).values()) == {"1"}
+            assert await engine.run(_pages_asked_of_the_system) < PAGES_OF_ONE_ARRAY
             with pytest.raises(ValueError, match="on purpose"):
                 await engine.run(_fail)
             many = [asyncio.create_task(engine.run(double_slowly, n)) for n in range(200)]
