@@ -192,6 +192,8 @@ class Passage:
         """
         wave = Wave(field)
         limit = self.edge_limit if checked else math.inf
+        if not self.weights.any():
+            guard = 0.0  # without the Kerr effect no step makes sidebands
         done: list[Leg] = []
         steps = spent = fewest = 0
         outcome = COMPLETED
