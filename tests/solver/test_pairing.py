@@ -12,12 +12,17 @@ LAYOUT = Layout.of(
 )
 
 
-def _blocks(covariance: np.ndarray) -> Blocks:
-    """Realizations whose moments make C12(0) the mean of the values given."""
+UNLIT = (0.0, 0.0)
+"""Expectations at a launch that :func:`_blocks` leaves without light: it controls nothing."""
+
+
+def _blocks(covariance: np.ndarray, launched: np.ndarray | None = None) -> Blocks:
+    """Realizations whose moments make C12(0), at both ends, the mean of the values given."""
     rows = np.zeros((len(covariance), LAYOUT.block_features))
-    last = rows[:, 5:10]
-    last[:, 2:4] = 1.0  # ⟨I²⟩ with ⟨I⟩ = 0, so that C12(0) is the mean of ⟨I1 I2⟩
-    last[:, 4] = covariance
+    # ⟨I²⟩ = 1 with ⟨I⟩ = 0, so that C12(0) is the mean of ⟨I1 I2⟩
+    rows[:, 7:9], rows[:, 9] = 1.0, covariance
+    if launched is not None:
+        rows[:, 2:4], rows[:, 4] = 1.0, launched
     blocks = Blocks(LAYOUT.block_features)
     blocks.add(rows)
     return blocks
@@ -30,7 +35,7 @@ def test_it_is_the_paired_mean_and_its_standard_error(count: int) -> None:
     shared = stream.standard_normal(count)
     own = 0.1 + 0.05 * shared + 0.01 * stream.standard_normal(count)
     other = 0.05 * shared
-    found = difference(LAYOUT, _blocks(own), _blocks(other))
+    found = difference(LAYOUT, _blocks(own), _blocks(other), UNLIT)
     assert found is not None
     assert found.realizations == count
     np.testing.assert_allclose(found.value, np.mean(own - other), rtol=1e-9)
@@ -45,7 +50,7 @@ def test_only_what_both_have_counts_and_groups_are_made_alike() -> None:
     values = np.random.default_rng(5).standard_normal(300)
     long, short = _blocks(0.1 * values), _blocks(0.1 * values[:90] + 0.2)
     assert (long.capacity, short.capacity) == (4, 1)
-    found = difference(LAYOUT, short, long)
+    found = difference(LAYOUT, short, long, UNLIT)
     assert found is not None
     assert found.realizations == 88
     np.testing.assert_allclose(found.value, 0.2, rtol=1e-9)
@@ -53,4 +58,24 @@ def test_only_what_both_have_counts_and_groups_are_made_alike() -> None:
 
 
 def test_one_group_has_no_error_and_so_no_difference() -> None:
-    assert difference(LAYOUT, _blocks(np.zeros(1)), _blocks(np.zeros(5))) is None
+    assert difference(LAYOUT, _blocks(np.zeros(1)), _blocks(np.zeros(5)), UNLIT) is None
+
+
+def test_the_launch_of_both_controls_their_difference() -> None:
+    """The paired regression on both launches, by least squares; and what it saves."""
+    stream = np.random.default_rng(7)
+    launches = 0.05 * stream.standard_normal((2, 60)) + np.array([[0.2], [0.0]])
+    shared, alone = 0.01 * stream.standard_normal((2, 60))
+    own = 0.1 + 0.9 * launches[0] + shared + alone
+    other = 0.05 + 0.4 * launches[1] + shared
+    expected = (0.2, 0.0)
+    found = difference(LAYOUT, _blocks(own, launches[0]), _blocks(other, launches[1]), expected)
+    plain = difference(LAYOUT, _blocks(own), _blocks(other), UNLIT)
+    assert found is not None
+    assert plain is not None
+    table = np.stack([np.ones(60), launches[0] - 0.2, launches[1]], axis=1)
+    level, *_ = np.linalg.lstsq(table, own - other, rcond=None)[0]
+    np.testing.assert_allclose(found.value, level, rtol=1e-9)
+    assert abs(found.value - (0.1 + 0.18 - 0.05)) < 4.0 * found.standard_error
+    assert found.standard_error == pytest.approx(np.std(alone) / np.sqrt(60), rel=0.2)
+    assert found.standard_error < 0.3 * plain.standard_error

@@ -4,11 +4,11 @@ import numpy as np
 import pytest
 
 from solver.experiment import Span
+from solver.fibre import sections
 from solver.grid import Grid
 from solver.propagation import light_of
 from solver.schemes import FOURTH_ORDER, SECOND_ORDER, Scheme
-from solver.track import Track
-from solver.transforms import Transforms
+from solver.track import Track, Wave
 from tests import reference
 
 SAMPLES, TIME_STEP_PS = 1024, 2.0
@@ -26,29 +26,37 @@ LINE = [
 ]
 
 
-class CountingTransforms(Transforms):
-    """Counts what the march really spends."""
+GRID = Grid(SAMPLES, TIME_STEP_PS)
 
-    spent = 0
+
+class CountedTransforms:
+    """The transforms of a wave, counting what the march really spends."""
+
+    def __init__(self, wave: Wave) -> None:
+        self._work = wave.work
+        self.buffer = wave.work.buffer
+        self.spent = 0
 
     def forward(self) -> None:
         self.spent += 1
-        super().forward()
+        self._work.forward()
 
     def inverse(self) -> None:
         self.spent += 1
-        super().inverse()
+        self._work.inverse()
 
 
 def _run(field: np.ndarray, scheme: Scheme, steps: int) -> tuple[np.ndarray, int, int]:
     """The field at the end, steps taken and transforms spent."""
-    track = Track(LINE, Grid(SAMPLES, TIME_STEP_PS), wavelength_nm=1550.0)
-    work = CountingTransforms(len(field), SAMPLES, "double")
-    pieces = track.pieces(scheme, light_of(field), steps)
-    work.buffer[:] = field
-    outcome = track.march(work, pieces, scheme, "double", edge_limit=1.0)
+    track = Track(sections(LINE, GRID, 1550.0, 0), GRID)
+    pieces = track.pieces(track.weights(scheme, light_of(field)), steps)
+    wave = Wave(field)
+    counted = CountedTransforms(wave)
+    wave.work = counted  # type: ignore[assignment]
+    outcome = track.march(wave, pieces, scheme, edge_limit=1.0)
     assert outcome.kind == "completed"
-    return work.buffer.copy(), sum(piece.steps for piece in pieces), work.spent
+    wave.settle()
+    return wave.field.copy(), sum(piece.steps for piece in pieces), counted.spent
 
 
 @pytest.mark.parametrize(
@@ -96,10 +104,10 @@ def test_second_order_is_the_plain_split_step() -> None:
     """Step for step the same as a plain numpy loop, so the putting-off of turns is harmless."""
     field = reference.stirred_light(6, 2, SAMPLES, TIME_STEP_PS, 0.02, 0.2)
     glass = reference.Glass(3.0, 18.5, 0.2, 0.05, 2.0, 1.0, 2 / 3, 0.7)
-    track = Track([glass.span()], Grid(SAMPLES, TIME_STEP_PS), wavelength_nm=1550.0)
-    work = Transforms(2, SAMPLES, "double")
-    work.buffer[:] = field
-    pieces = track.pieces(SECOND_ORDER, light_of(field), 37)
-    track.march(work, pieces, SECOND_ORDER, "double", edge_limit=1.0)
+    track = Track(sections([glass.span()], GRID, 1550.0, 0), GRID)
+    wave = Wave(field)
+    pieces = track.pieces(track.weights(SECOND_ORDER, light_of(field)), 37)
+    track.march(wave, pieces, SECOND_ORDER, edge_limit=1.0)
+    wave.settle()
     plain = reference.split_step(field, TIME_STEP_PS, [glass], 37)
-    assert reference.relative_l2(work.buffer, plain) < 1e-12
+    assert reference.relative_l2(wave.field, plain) < 1e-12
