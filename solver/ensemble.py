@@ -201,6 +201,8 @@ def run_round(task: RoundTask) -> RoundOutcome:
     """Realizations ``task.first`` and following; the first round also finds the schedule."""
     start_s = time.perf_counter()
     bench = Bench(task.experiment)
+    if bench.passage.expected_steps > STEP_LIMIT:
+        return RoundOutcome(TOO_FINE.kind, TOO_FINE.advice)
     schedule, spent, findings = task.schedule, 0, None
     blocks: list[Real] = []
     sums: list[Real] = []
@@ -298,6 +300,8 @@ def run_map(task: MapTask) -> MapPart:
     The first round of the same point replaces it by a map whose steps have been checked.
     """
     whole = _Map(Passage(task.experiment, MAP_ROWS))
+    if whole.passage.expected_steps > STEP_LIMIT:
+        return MapPart(TOO_FINE.kind)
     field = whole.launch() if task.field is None else task.field
     leg = task.leg or whole.passage.expected()[0]
     parts = map_parts(task.experiment)

@@ -144,10 +144,14 @@ class Passage:
         """What :meth:`Track.weights` says of the line and the light at the launch."""
         return self.track(self.start_samples).weights(self.scheme, self.light)
 
+    @cached_property
+    def expected_steps(self) -> float:
+        """Steps that should keep the bias within what is allowed, judged from the launch alone."""
+        return expected_steps(self.weights, self.scheme, self._expected_error)
+
     def expected(self) -> Schedule:
-        """What should keep the bias within what is allowed, judged from the launch alone."""
-        steps = expected_steps(self.weights, self.scheme, self._expected_error)
-        return self.evenly(self.start_samples, math.ceil(min(steps, float(STEP_LIMIT))))
+        """The expected steps, on the narrowest grid."""
+        return self.evenly(self.start_samples, math.ceil(self.expected_steps))
 
     def evenly(self, samples: int, steps: int) -> Schedule:
         """The same grid and density of steps all along."""
