@@ -14,7 +14,7 @@ from itertools import pairwise
 import numpy as np
 
 from solver.experiment import Study
-from solver.pairing import difference
+from solver.pairing import Difference, difference
 from solver.result import LinearRegime, Picture, PointResult, StudyResult
 from solver.statistics import Blocks, Estimators, Layout, Means, last_central
 from solver.task import (
@@ -95,6 +95,7 @@ class Chain:
         self._in_task = chunk_size(self.ensemble.samples)
         self._early: dict[int, RoundOutcome] = {}  # what overtook an earlier part of its round
         self._result: PointResult | None = None
+        self._error: float | None = None
 
     @property
     def realizations(self) -> int:
@@ -141,9 +142,11 @@ class Chain:
         """Standard error of C12(0) at the end of the line, infinite before there is one."""
         if self.realizations < 2 or not self.findings:
             return math.inf
-        launched = self.findings.linear.launched
-        error = float(last_central(self.layout, self.blocks, launched).standard_error[0])
-        return error if math.isfinite(error) else math.inf
+        if self._error is None:
+            launched = self.findings.linear.launched
+            error = float(last_central(self.layout, self.blocks, launched).standard_error[0])
+            self._error = error if math.isfinite(error) else math.inf
+        return self._error
 
     def absorb(self, task: RoundTask, outcome: RoundOutcome) -> list[RoundTask]:
         """Take an outcome in; when its round is whole, the tasks of the next one.
@@ -154,7 +157,7 @@ class Chain:
             return []
         self._early[task.first] = outcome
         while (part := self._early.pop(self.realizations, None)) is not None:
-            self._result = None
+            self._result = self._error = None
             if part.outcome != "completed":
                 self._give_up(part)
                 return []
@@ -305,6 +308,7 @@ class StudyState:
         self.study = study
         self.live_map = (0, study.sweep.points - 1)
         self._furthest = 0.0
+        self._differences: dict[tuple[int, int], tuple[tuple[int, int], Difference | None]] = {}
         variants = range(len(study.variants))
         self.chains = {
             (variant, point): Chain(study, variant, point)
@@ -368,9 +372,13 @@ class StudyState:
         found = chain.result()
         if found is None or chain is first or not (chain.findings and first.findings):
             return found
-        launched = chain.findings.linear.launched, first.findings.linear.launched
-        paired = difference(chain.layout, chain.blocks, first.blocks, launched)
-        return replace(found, difference=paired)
+        counts = chain.realizations, first.realizations
+        known = self._differences.get((variant, point))
+        if known is None or known[0] != counts:
+            launched = chain.findings.linear.launched, first.findings.linear.launched
+            paired = difference(chain.layout, chain.blocks, first.blocks, launched)
+            known = self._differences[variant, point] = counts, paired
+        return replace(found, difference=known[1])
 
     def touched(self, task: Task) -> list[tuple[int, int]]:
         """The (variant, point) whose results an outcome of the task may have changed."""
