@@ -1,12 +1,14 @@
-"""The solver on one core: against a plain script, against its bare transforms, as it grows.
+"""The solver on one core: against a plain script and its bare transforms, and as it grows.
 
 Times are processor time of this process, which the rest of the machine disturbs least.
 """
 
 import importlib.util
 import math
+import subprocess
+import sys
 import time
-from collections.abc import Callable, Sequence
+from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 from statistics import median
@@ -19,13 +21,13 @@ from solver.ensemble import Bench, pilot, run_round
 from solver.experiment import Experiment, Precision, Study, with_changes
 from solver.grid import Field
 from solver.passage import Passage
-from solver.propagation import Propagation, light_of, propagate, relative_error
-from solver.schemes import SECOND_ORDER, Scheme
+from solver.propagation import Propagation, propagate, relative_error
+from solver.schemes import SECOND_ORDER
 from solver.statistics import central
 from solver.study import Chain, StudyState, execute
 from solver.task import CHUNK, PILOTED, RoundTask, Schedule, Task
-from solver.track import Track, Wave
-from solver.transforms import COMPLEX, batch_size, batches, resampled, transforms
+from solver.track import Wave
+from solver.transforms import MOST_TOGETHER, batch_size, batches, resampled, transforms
 
 PLAIN_ERROR = 1e-3
 """Field error to which the plain script computes a study."""
@@ -55,7 +57,7 @@ def timed(work: Callable[..., T], *given: Any) -> tuple[T, float]:
     return made, time.process_time() - start_s
 
 
-def _plain_fibre(plain: ModuleType, experiment: Experiment) -> Any:
+def plain_fibre(plain: ModuleType, experiment: Experiment) -> Any:
     (span,) = experiment.line
     return plain.Fibre(
         span.length_km,
@@ -80,11 +82,13 @@ def computed(study: Study) -> StudyState:
 class PlainStudy:
     """What the plain script takes for a study.
 
-    cpu_s: processor time for the study's standard errors, in realizations; equal_cpu_s: with as
-    many realizations as the study took, study_realizations. Both over all points.
+    cpu_s: processor time for the study's standard errors, in realizations; one_grid_cpu_s: the
+    same on the widest grid for all powers; equal_cpu_s: with as many realizations as the study
+    took, study_realizations. All over all points.
     """
 
     cpu_s: float
+    one_grid_cpu_s: float
     realizations: int
     equal_cpu_s: float
     study_realizations: int
@@ -111,26 +115,33 @@ def plain_study(plain: ModuleType, state: StudyState, timed_realizations: int) -
     its steps is not charged. The script averages what it sees, so it needs more realizations for
     the same standard error: how many more is read off the study's own realizations.
     """
-    cpu_s = equal_cpu_s = 0.0
+    chains = [chain for chain in state.chains.values() if chain.findings]
+    grids = [
+        max(leg.samples for leg in chain.findings.schedule) for chain in chains if chain.findings
+    ]
+    cpu_s = one_grid_cpu_s = equal_cpu_s = 0.0
     needed = 0
     chosen = []
-    for chain in state.chains.values():
-        if chain.findings is None:
-            continue
-        passage = Passage(chain.experiment, 1)
-        samples = max(leg.samples for leg in chain.findings.schedule)
-        fields = resampled(passage.fields(range(timed_realizations)), samples)
-        fibre, step_ps = _plain_fibre(plain, chain.experiment), passage.grid(samples).time_step_ps
-        steps, _ = plain.steps_for(fields[0], step_ps, fibre, PLAIN_ERROR)
-
-        _, taken_s = timed(_script, plain, fields, step_ps, fibre, steps)
+    for chain, own in zip(chains, grids, strict=True):
+        passage, fibre = Passage(chain.experiment, 1), plain_fibre(plain, chain.experiment)
+        launched = passage.fields(range(timed_realizations))
+        taken_s: dict[int, float] = {}
+        for samples in sorted({own, max(grids)}):
+            fields, step_ps = resampled(launched, samples), passage.grid(samples).time_step_ps
+            if samples == own:
+                steps, _ = plain.steps_for(fields[0], step_ps, fibre, PLAIN_ERROR)
+                chosen.append(steps)
+            _, all_s = timed(_script, plain, fields, step_ps, fibre, steps)
+            taken_s[samples] = all_s / timed_realizations
         more = math.ceil(chain.realizations * _more_realizations(chain))
         needed += more
-        cpu_s += taken_s / timed_realizations * more
-        equal_cpu_s += taken_s / timed_realizations * chain.realizations
-        chosen.append(steps)
-    taken = state.progress().realizations
-    return PlainStudy(cpu_s, needed, equal_cpu_s, taken, min(chosen), max(chosen))
+        cpu_s += taken_s[own] * more
+        one_grid_cpu_s += taken_s[max(grids)] * more
+        equal_cpu_s += taken_s[own] * chain.realizations
+    realizations = state.progress().realizations
+    return PlainStudy(
+        cpu_s, one_grid_cpu_s, needed, equal_cpu_s, realizations, min(chosen), max(chosen)
+    )
 
 
 def at_power(power_mw: float, **ensemble: Any) -> Experiment:
@@ -191,7 +202,7 @@ class Single:
 def single_propagation(plain: ModuleType, power_mw: float, tolerance: float) -> Single:
     """One field, double precision; the solver's trial runs are charged, the script's not."""
     line = resolved_line(power_mw, 1, tolerance, "double")
-    field, fibre = line.fields[0], _plain_fibre(plain, line.experiment)
+    field, fibre = line.fields[0], plain_fibre(plain, line.experiment)
     out = line.propagate(tolerance, "double")
     # The error falls with the square of the step: an easier tolerance tells where to look.
     rough, _ = plain.steps_for(field, line.time_step_ps, fibre, 1e3 * tolerance)
@@ -218,9 +229,9 @@ def _bare_s(realizations: int, samples: int, precision: Precision, count: int) -
 
 def over_transforms(power_mw: float, tolerance: float, precision: Precision) -> tuple[float, int]:
     """Time of a whole propagation of a full batch over that of its transforms; their number."""
-    line = resolved_line(power_mw, PILOTED, tolerance, precision)
+    line = resolved_line(power_mw, MOST_TOGETHER, tolerance, precision)
     samples = line.fields.shape[2]
-    realizations = min(PILOTED, batch_size(samples))
+    realizations = batch_size(samples)
     line = Line(line.experiment, line.fields[:realizations], line.time_step_ps)
     out = line.propagate(tolerance, precision)
     ratios = []
@@ -240,14 +251,15 @@ class Later:
 
     def _bare_s(self) -> float:
         precision, total_s = self.passage.precision, 0.0
-        for batch in self._batches():
+        for batch in self.batches():
             for index, leg in enumerate(self.schedule):
                 steps = sum(piece.steps for piece in self.passage.pieces(leg)[index])
                 count = steps * self.passage.scheme.transforms_per_step
                 total_s += _bare_s(len(batch), leg.samples, precision, count)
         return total_s
 
-    def _batches(self) -> list[range]:
+    def batches(self) -> list[range]:
+        """Realizations that go together."""
         task = self.task
         rows = range(task.first, task.first + task.count)
         return list(batches(rows, max(leg.samples for leg in self.schedule)))
@@ -255,7 +267,7 @@ class Later:
     def over_transforms(self) -> tuple[float, float]:
         """Times over those of the transforms: of the fields' way alone, and of the whole task."""
         alone, whole = [], []
-        launched = [self.passage.fields(batch) for batch in self._batches()]
+        launched = [self.passage.fields(batch) for batch in self.batches()]
 
         def travel() -> None:
             for fields in launched:
@@ -281,76 +293,6 @@ def later_task(power_mw: float) -> Later:
     return Later(task, found.schedule, Passage(experiment, experiment.ensemble.distances))
 
 
-@dataclass(frozen=True)
-class Rung:
-    """One run with a fixed number of steps: batch transforms, processor time in s, error."""
-
-    transforms: int
-    cpu_s: float
-    error: float
-
-
-class Ladder:
-    """Runs of one field down one line with ever more steps, held against a very fine one."""
-
-    def __init__(self, power_mw: float, samples: int, finest: Scheme, finest_steps: int):
-        self._passage = Passage(at_power(power_mw, precision="double"), 1)
-        self._samples = samples
-        self._fields = resampled(self._passage.fields(range(1)), samples)
-        self._uniform = self._passage.track(samples)
-        self.truth, _ = self._march(self._uniform, finest, "double", finest_steps)
-
-    def _march(
-        self, track: Track, scheme: Scheme, precision: Precision, steps: float
-    ) -> tuple[Field, int]:
-        weights = track.weights(scheme, light_of(self._fields))
-        pieces = track.pieces(weights, steps)
-        wave = Wave(self._fields.astype(COMPLEX[precision]))
-        outcome = track.march(wave, pieces, scheme, edge_limit=1.0)
-        if outcome.kind != "completed":
-            raise RuntimeError(outcome.advice)
-        wave.settle()
-        taken = sum(piece.steps for piece in pieces)
-        return wave.field.copy(), taken * scheme.transforms_per_step
-
-    def rungs(
-        self, scheme: Scheme, precision: Precision, steps: Sequence[int], parts: int = 1
-    ) -> list[Rung]:
-        """Runs with these numbers of steps, shared over equal parts of the line."""
-        track = self._passage.watched(parts).track(self._samples)
-        made = []
-        for count in steps:
-            self._march(track, scheme, precision, count)  # makes the operators
-            runs = [timed(self._march, track, scheme, precision, count) for _ in range(3)]
-            (field, spent), _ = runs[-1]
-            taken_s = min(taken_s for _, taken_s in runs)
-            made.append(Rung(spent, taken_s, relative_error(field, self.truth)))
-        return made
-
-    def plain_rungs(self, plain: ModuleType, steps: Sequence[int]) -> list[Rung]:
-        """The same of the plain script."""
-        fibre = _plain_fibre(plain, self._passage.experiment)
-        step_ps = self._passage.grid(self._samples).time_step_ps
-        made = []
-        for count in steps:
-            field, taken_s = timed(plain.propagate, self._fields[0], step_ps, fibre, count)
-            made.append(Rung(2 * count + 2, taken_s, relative_error(field[None], self.truth)))
-        return made
-
-
-def transforms_at(error: float, rungs: Sequence[Rung]) -> float:
-    """Transforms for an error, between the runs that enclose it on logarithmic axes.
-
-    Infinite where the runs do not reach it.
-    """
-    falling = sorted(rungs, key=lambda rung: rung.error)
-    errors = np.log([rung.error for rung in falling])
-    if not errors[0] <= np.log(error) <= errors[-1]:
-        return float("inf")
-    counts = np.log([rung.transforms for rung in falling])
-    return float(np.exp(np.interp(np.log(error), errors, counts)))
-
-
 def step_s(samples: int, steps: int) -> float:
     """Processor time of one second-order step of one realization of this many samples, s."""
     passage = Passage(at_power(200.0, samples=samples, window_ps=2.0 * samples), 1)
@@ -363,6 +305,23 @@ def step_s(samples: int, steps: int) -> float:
 
     march()
     return min(timed(march)[1] for _ in range(3)) / steps / len(fields)
+
+
+_UNPLANNED = """
+import sys
+sys.modules["pyfftw"] = None
+from server import yardstick
+print(yardstick.found_steps({power_mw}, {length_km}).realization_s)
+"""
+
+
+def unplanned_s(power_mw: float, length_km: float) -> float:
+    """What :func:`found_steps` times, s, in a process that has no pyFFTW."""
+    script = _UNPLANNED.format(power_mw=power_mw, length_km=length_km)
+    done = subprocess.run(
+        [sys.executable, "-c", script], capture_output=True, text=True, check=True
+    )
+    return float(done.stdout)
 
 
 @dataclass(frozen=True)

@@ -31,7 +31,7 @@ except ImportError:
 PLANNED = pyfftw is not None
 """Whether transforms are planned by FFTW, and not left to scipy."""
 UNPLANNED_COST = (
-    "pyFFTW is not installed: with scipy's transforms propagation takes about three times as "
+    "pyFFTW is not installed: with scipy's transforms propagation takes two to three times as "
     "long (to mend it: pip install pyfftw)"
 )
 """What to tell whoever starts a process that is not :data:`PLANNED`."""
