@@ -88,8 +88,7 @@ def test_variance_bias_and_coverage(count: int, correlation: float) -> None:
     # Fourth moments of the estimate exceed a Gaussian's a little where there are few groups.
     scatter = np.std(off**2, ddof=1) / np.sqrt(repetitions)
     assert abs(np.mean(off**2) - expected) < 3.5 * scatter
-    # The bar never promises more than Student's t with one degree of freedom taken does, and
-    # asks for no more than a tenth more realizations' worth of spread than there is.
+    # The bar tells the spread, and a one-sigma bar what it says, to order one over the groups.
     inside = np.mean(np.abs(off) < bars)
     honest = 0.6827
     slack = 3.5 * np.sqrt(honest * (1.0 - honest) / repetitions)

@@ -19,6 +19,7 @@ from solver.transforms import (
     batch_size,
     batches,
     plan_ahead,
+    resampled,
     usual_shapes,
 )
 from tests import reference
@@ -158,3 +159,40 @@ def test_batches_stay_in_the_cache() -> None:
     assert batch_size(256) == MOST_TOGETHER
     assert batch_size(2**14) == 1
     assert batch_size(2**22) == 1
+
+
+def test_batches_cover_every_row_once_in_few_shapes() -> None:
+    """In order, none larger than fits, all sizes powers of two."""
+    for rows, samples in ((range(23), 512), (range(5, 6), 4096), (range(3, 40), 2**13)):
+        parts = list(batches(rows, samples))
+        assert [row for part in parts for row in part] == list(rows)
+        assert all(len(part) <= batch_size(samples) for part in parts)
+        assert all(len(part) & (len(part) - 1) == 0 for part in parts)
+
+
+@pytest.mark.parametrize(("dtype", "rounding"), [(np.complex64, 1e-6), (np.complex128, 1e-14)])
+@pytest.mark.parametrize(("few", "many"), [(256, 512), (256, 4096), (300, 1000)])
+def test_resampled_there_and_back(dtype: type, rounding: float, few: int, many: int) -> None:
+    """Band-limited light returns, is continued between its samples, and keeps its mean power."""
+    light = reference.stirred_light(2, 3, few, 1000.0 / few, 0.02, 1.0).astype(dtype)
+    fine = resampled(light, many)
+    assert fine.shape == (3, 2, many)
+    assert fine.dtype == dtype
+    assert reference.relative_l2(resampled(fine, few), light) < rounding
+    if many % few == 0:
+        assert reference.relative_l2(fine[..., :: many // few], light) < rounding
+    power = [np.mean(np.abs(field) ** 2, axis=2, dtype=np.float64) for field in (light, fine)]
+    np.testing.assert_allclose(power[1], power[0], rtol=10 * rounding)
+    assert resampled(light, few) is light
+
+
+@pytest.mark.parametrize(("have", "samples"), [(64, 256), (256, 64), (60, 100), (100, 60)])
+def test_resampled_keeps_each_bin_in_its_place(have: int, samples: int) -> None:
+    """The spectrum per sample is the same in the narrower band, and zero or left out beyond."""
+    stream = np.random.default_rng(8)
+    spectrum = stream.standard_normal((1, 2, have)) + 1j * stream.standard_normal((1, 2, have))
+    found = np.fft.fft(resampled(np.fft.ifft(spectrum, norm="forward"), samples), norm="forward")
+    half = min(have, samples) // 2
+    np.testing.assert_allclose(found[..., :half], spectrum[..., :half], rtol=1e-12)
+    np.testing.assert_allclose(found[..., -half:], spectrum[..., -half:], rtol=1e-12)
+    assert np.abs(found[..., half:-half]).max(initial=0.0) < 1e-14
