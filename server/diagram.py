@@ -63,7 +63,7 @@ def _panel(
         parts.append(_text(left - 6, y + 4, _superscript(power), "end"))
     _, y = at(10.0**first, switch)
     parts.append(f'<path d="M{left} {y:.1f}h{_WIDTH}" stroke="#000" stroke-dasharray="5 4"/>')
-    parts.append(_text(left + 6, y + 15, "order chosen: 2 above, 4 below", "start"))
+    parts.append(_text(left + 6, y + 15, "order 2 above, 4 below", "start"))
     for colour, curve in zip(_COLOURS, curves.values(), strict=False):
         places = [at(x, y) for x, y in sorted(curve)]
         path = "L".join(f"{x:.1f} {y:.1f}" for x, y in places)
