@@ -44,7 +44,7 @@ def test_run_writes_what_the_server_would(
 
 def test_any_number_of_workers_gives_the_same_bits(tmp_path: Path) -> None:
     """Several rounds of several tasks for each point, so that the order of completion differs."""
-    study = tiny(3, standard_error_target=0.03, max_realizations=160)
+    study = tiny(3, standard_error_target=0.002, max_realizations=160)
     path = tmp_path / "study.json"
     path.write_text(json.dumps(study))
     results = []
