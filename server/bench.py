@@ -98,11 +98,11 @@ def _against_plain_study(study: Study, timing: Timing) -> None:
     )
     _row("the same study in one process, without a server", f"{here_s:.1f} s")
     _row("plain script, equal standard errors", f"{script.cpu_s:.1f} s")
-    _row("plain script, on one grid for all powers", f"{script.one_grid_cpu_s:.1f} s")
+    _row("plain script, given each point's narrow grid", f"{script.narrow_cpu_s:.1f} s")
     _row("plain script, equal realizations", f"{script.equal_cpu_s:.1f} s")
     _note(
         f"timed on {TIMED_REALIZATIONS} realizations of each point, on the grid that the study "
-        "widened to there, and scaled to the"
+        "was given, and scaled to the"
     )
     _note(
         f"{script.realizations} that plain averages need for the study's standard errors; the "
@@ -114,7 +114,7 @@ def _against_plain_study(study: Study, timing: Timing) -> None:
     )
     for words, cpu_s, goal in (
         ("", script.cpu_s, "25 ×, aim 50"),
-        (", one grid", script.one_grid_cpu_s, ""),
+        (", narrow grids", script.narrow_cpu_s, ""),
         (", equal realizations", script.equal_cpu_s, ""),
     ):
         ratio = f"{cpu_s / timing.end_s:.1f} ×"

@@ -23,12 +23,14 @@ from solver.grid import Field
 from solver.passage import Passage
 from solver.propagation import Propagation, propagate, relative_error
 from solver.schemes import SECOND_ORDER
-from solver.statistics import central
+from solver.statistics import Blocks, central, last_central
 from solver.study import Chain, StudyState, execute
 from solver.task import CHUNK, PILOTED, RoundTask, Schedule, Task
 from solver.track import Wave
 from solver.transforms import MOST_TOGETHER, batch_size, batches, resampled, transforms
 
+COMPARED = 96
+"""Realizations of each point from which the worth of the control variate is told."""
 PLAIN_ERROR = 1e-3
 """Field error to which the plain script computes a study."""
 REPEATS = 5
@@ -82,13 +84,14 @@ def computed(study: Study) -> StudyState:
 class PlainStudy:
     """What the plain script takes for a study.
 
-    cpu_s: processor time for the study's standard errors, in realizations; one_grid_cpu_s: the
-    same on the widest grid for all powers; equal_cpu_s: with as many realizations as the study
-    took, study_realizations. All over all points.
+    cpu_s: processor time for the study's standard errors, in realizations, on the grid that the
+    study was given; narrow_cpu_s: the same on the widest grid that the study took at each point;
+    equal_cpu_s: on the study's grid, with as many realizations as the study took,
+    study_realizations. All over all points.
     """
 
     cpu_s: float
-    one_grid_cpu_s: float
+    narrow_cpu_s: float
     realizations: int
     equal_cpu_s: float
     study_realizations: int
@@ -102,45 +105,56 @@ def _script(plain: ModuleType, fields: Field, time_step_ps: float, fibre: Any, s
 
 
 def _more_realizations(chain: Chain) -> float:
-    """How many times the study's realizations its standard error takes without a control."""
+    """How many times the study's realizations its standard error takes without a control.
+
+    Told from more realizations than a point has: the ratio of two errors needs them.
+    """
+    findings = chain.findings
+    assert findings is not None
+    task = RoundTask(
+        "ratio", 0, 0, 0, chain.experiment, first=0, count=COMPARED, schedule=findings.schedule
+    )
+    blocks = Blocks(chain.layout.block_features)
+    blocks.add(run_round(task).blocks)
     last = slice(5 * (chain.layout.distances - 1), 5 * chain.layout.distances)
-    alone = chain.blocks.estimate(lambda means: central(means[..., last])[..., None])
-    return float(alone.standard_error[0] / chain.standard_error()) ** 2
+    alone = blocks.estimate(lambda means: central(means[..., last])[..., None])
+    mended = last_central(chain.layout, blocks, findings.linear.launched)
+    return float(alone.standard_error[0] / mended.standard_error[0]) ** 2
 
 
 def plain_study(plain: ModuleType, state: StudyState, timed_realizations: int) -> PlainStudy:
     """Time the plain script on some realizations of each point, scaled to those it needs.
 
-    It is given the study's light on the widest grid that the study took it to; the search for
-    its steps is not charged. The script averages what it sees, so it needs more realizations for
-    the same standard error: how many more is read off the study's own realizations.
+    It knows nothing of narrower grids for weaker light, but is timed on them too, and it is given
+    a finer time step where the light needs one; the search for its steps is not charged. The
+    script averages what it sees, so it needs more realizations for the same standard error.
     """
     chains = [chain for chain in state.chains.values() if chain.findings]
-    grids = [
-        max(leg.samples for leg in chain.findings.schedule) for chain in chains if chain.findings
-    ]
-    cpu_s = one_grid_cpu_s = equal_cpu_s = 0.0
+    cpu_s = narrow_cpu_s = equal_cpu_s = 0.0
     needed = 0
     chosen = []
-    for chain, own in zip(chains, grids, strict=True):
+    for chain in chains:
+        assert chain.findings is not None
+        narrow = max(leg.samples for leg in chain.findings.schedule)
+        given = max(narrow, chain.ensemble.samples)
         passage, fibre = Passage(chain.experiment, 1), plain_fibre(plain, chain.experiment)
         launched = passage.fields(range(timed_realizations))
         taken_s: dict[int, float] = {}
-        for samples in sorted({own, max(grids)}):
+        for samples in sorted({narrow, given}, reverse=True):
             fields, step_ps = resampled(launched, samples), passage.grid(samples).time_step_ps
-            if samples == own:
+            if samples == given:
                 steps, _ = plain.steps_for(fields[0], step_ps, fibre, PLAIN_ERROR)
                 chosen.append(steps)
             _, all_s = timed(_script, plain, fields, step_ps, fibre, steps)
             taken_s[samples] = all_s / timed_realizations
         more = math.ceil(chain.realizations * _more_realizations(chain))
         needed += more
-        cpu_s += taken_s[own] * more
-        one_grid_cpu_s += taken_s[max(grids)] * more
-        equal_cpu_s += taken_s[own] * chain.realizations
+        cpu_s += taken_s[given] * more
+        narrow_cpu_s += taken_s[narrow] * more
+        equal_cpu_s += taken_s[given] * chain.realizations
     realizations = state.progress().realizations
     return PlainStudy(
-        cpu_s, one_grid_cpu_s, needed, equal_cpu_s, realizations, min(chosen), max(chosen)
+        cpu_s, narrow_cpu_s, needed, equal_cpu_s, realizations, min(chosen), max(chosen)
     )
 
 

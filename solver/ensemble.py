@@ -36,6 +36,8 @@ from solver.transforms import batches, resampled
 
 PILOT_GUARD = 1 / 3
 """The pilot stays this much clearer of a band ended by its steps than the ensemble must."""
+MAP_LEGS = 16
+"""Parts of the line after which the light of a map is looked at; each has some of its rows."""
 COARSER = 1.6
 """Ratio of the numbers of steps of two runs that are compared."""
 STALLED = 0.9
@@ -118,10 +120,10 @@ TOO_FINE = Outcome(
 def pilot(bench: Bench, launched: Field) -> Pilot:
     """Find steps and grid for a whole ensemble on a few of its realizations, which are all alike.
 
-    The rule: the bias of C12(0) at the end of the line, plus its own standard error, stays under
-    BIAS_SHARE of the standard error that is aimed at, and the field's error under the field
-    tolerance. Both are judged from a second run with fewer steps (or more, where there is but one
-    on each leg), by Richardson's argument, realization by realization.
+    The rule: the bias of C12(0) at the end of the line, plus two of its own standard errors,
+    stays under BIAS_SHARE of the standard error that is aimed at, and the field's error under the
+    field tolerance. Both are judged from a second run with fewer steps (or more, where there is
+    but one on each leg), by Richardson's argument, realization by realization.
     """
     passage = bench.passage
     order = passage.scheme.order
@@ -135,6 +137,11 @@ def pilot(bench: Bench, launched: Field) -> Pilot:
         schedule = trip.schedule
         if trip.outcome.kind != "completed" or not passage.weights.any():
             return Pilot(schedule, 0.0, spent, seen, trip.outcome)
+        most = max(leg.steps for leg in schedule)
+        if any(leg.steps < most for leg in schedule):
+            # Steps that grew on the way grow from the start: see Track.pieces.
+            schedule = tuple(replace(leg, steps=most) for leg in schedule)
+            continue
         if other is None or trip.steps < COARSER * other.steps:
             other = _compared(passage, trip, launched)
             spent += other.transforms
@@ -147,12 +154,13 @@ def pilot(bench: Bench, launched: Field) -> Pilot:
         shift = _shift(seen.moments[:, -1], bench.moments(field))
         bias, unsure = abs(float(shift.value[0])) / scale, float(shift.standard_error[0]) / scale
         unsure = unsure if math.isfinite(unsure) else 0.0
-        excess = max(error / passage.field_tolerance, (bias + unsure) / passage.bias_allowed)
+        excess = max(error / passage.field_tolerance, (bias + 2.0 * unsure) / passage.bias_allowed)
         if excess <= 1.0:
             # As few as have just been tried may do.
-            fewer = max((1.5 * excess) ** (1 / order), other.steps / trip.steps)
-            if fewer < 0.9:
-                return Pilot(_scaled(schedule, fewer), bias / fewer**order, spent, seen)
+            fewer = _scaled(schedule, max((1.2 * excess) ** (1 / order), 1 / COARSER))
+            saved = passage.steps(fewer) / trip.steps
+            if saved > 0.95 / COARSER and excess <= saved**order:
+                return Pilot(fewer, bias / saved**order, spent, seen)
             return Pilot(schedule, bias, spent, seen)
         if excess > STALLED * previous_excess:
             # Shorter steps do not help: what is left is cut off by the band.
@@ -261,24 +269,25 @@ class _Map:
 
     def __init__(self, passage: Passage) -> None:
         experiment = passage.experiment
-        self.passage = passage.watched(MAP_ROWS)
+        self.passage = passage.watched(MAP_LEGS, MAP_ROWS // MAP_LEGS)
         self._columns = min(MAP_COLUMNS, experiment.ensemble.samples)
         self._scale_w = BRIGHTEST * 1e-3 * experiment.launch.total_power_mw / 255.0
-        self._rows: list[Real] = []
+        self._rows: dict[int, Real] = {}
 
     def launch(self) -> Field:
         """The field of realization 0; its row is the first."""
         field = self.passage.fields(range(1))
-        self.keep(0, field)
+        self.keep(-1, field)
         return field
 
-    def keep(self, _: int, field: Field) -> None:
-        """Take a row from a field."""
-        self._rows.append(column_powers(field[0], self._columns))
+    def keep(self, row: int, field: Field) -> None:
+        """Take a row from a field; one that comes again is the better one."""
+        self._rows[row] = column_powers(field[0], self._columns)
 
     def picture(self) -> Picture:
         """The rows kept, as levels."""
-        return Picture(map_levels(np.stack(self._rows), self._scale_w), self._scale_w)
+        rows = np.stack(list(self._rows.values()))
+        return Picture(map_levels(rows, self._scale_w), self._scale_w)
 
 
 def _picture(passage: Passage, schedule: Schedule) -> tuple[Picture, Outcome]:
@@ -290,8 +299,8 @@ def _picture(passage: Passage, schedule: Schedule) -> tuple[Picture, Outcome]:
 
 
 def _refined(schedule: Schedule) -> Schedule:
-    """A schedule of a map's rows from one of other legs of the same line."""
-    return tuple(schedule[row * len(schedule) // MAP_ROWS] for row in range(MAP_ROWS))
+    """A schedule of a map's legs from one of other legs of the same line."""
+    return tuple(schedule[leg * len(schedule) // MAP_LEGS] for leg in range(MAP_LEGS))
 
 
 def run_map(task: MapTask) -> MapPart:
@@ -299,18 +308,18 @@ def run_map(task: MapTask) -> MapPart:
 
     The first round of the same point replaces it by a map whose steps have been checked.
     """
-    whole = _Map(Passage(task.experiment, MAP_ROWS))
+    whole = _Map(Passage(task.experiment, MAP_LEGS))
     if whole.passage.expected_steps > STEP_LIMIT:
         return MapPart(TOO_FINE.kind)
     field = whole.launch() if task.field is None else task.field
     leg = task.leg or whole.passage.expected()[0]
     parts = map_parts(task.experiment)
-    rows = MAP_ROWS // parts
-    start = task.part * rows
-    trip = whole.passage.travel(field, (leg,) * rows, first=start, observe=whole.keep)
+    legs = MAP_LEGS // parts
+    first = task.part * legs
+    trip = whole.passage.travel(field, (leg,) * legs, first=first, observe=whole.keep)
     if trip.outcome.kind != "completed":
         return MapPart(trip.outcome.kind)
-    first_row = 0 if task.part == 0 else start + 1
+    first_row = 0 if task.part == 0 else task.part * MAP_ROWS // parts + 1
     if task.part + 1 == parts:
         return MapPart("completed", first_row, whole.picture())
     return MapPart("completed", first_row, whole.picture(), trip.field, trip.schedule[-1])

@@ -8,7 +8,6 @@ statistically alike; one that needs more than they did widens its own grid on th
 """
 
 import math
-from collections.abc import Callable
 from dataclasses import dataclass
 from functools import cached_property, lru_cache
 
@@ -21,7 +20,17 @@ from solver.propagation import STEP_LIMIT, edge_limit, scheme_for
 from solver.relation import input_response
 from solver.source import draw, synthesize
 from solver.task import Leg, Schedule
-from solver.track import COMPLETED, EDGE, Light, Outcome, Piece, Track, Wave, expected_steps
+from solver.track import (
+    COMPLETED,
+    EDGE,
+    Light,
+    Observer,
+    Outcome,
+    Piece,
+    Track,
+    Wave,
+    expected_steps,
+)
 from solver.transforms import COMPLEX
 
 BIAS_SHARE = 0.1
@@ -54,13 +63,14 @@ class Trip:
 class Passage:
     """An experiment made ready to run: launch, line, scheme, and the limits of its band.
 
-    legs: equal parts of the line at whose ends the field is watched.
+    legs: equal parts of the line at whose ends the field is watched. rows: equal parts of each
+    leg at whose ends it is observed, at the end of the leg if there is one row.
     """
 
-    def __init__(self, experiment: Experiment, legs: int) -> None:
+    def __init__(self, experiment: Experiment, legs: int, rows: int = 1) -> None:
         ensemble = experiment.ensemble
         self.experiment = experiment
-        self.legs = legs
+        self.legs, self.rows = legs, rows
         self.precision = ensemble.precision
         self.bias_allowed = BIAS_SHARE * ensemble.standard_error_target
         self.field_tolerance = ensemble.field_tolerance
@@ -74,9 +84,9 @@ class Passage:
         self._tracks: dict[int, Track] = {}
         self._pieces: dict[Leg, list[list[Piece]]] = {}
 
-    def watched(self, legs: int) -> "Passage":
+    def watched(self, legs: int, rows: int = 1) -> "Passage":
         """The same passage, watched at the ends of other parts."""
-        other = Passage(self.experiment, legs)
+        other = Passage(self.experiment, legs, rows)
         other._sections = self._sections
         other.start_samples, other.response = self.start_samples, self.response
         return other
@@ -135,7 +145,8 @@ class Passage:
                     experiment.source.wavelength_nm,
                     experiment.ensemble.seed,
                 )
-            ends = [experiment.length_km * (i + 1) / self.legs for i in range(self.legs)]
+            parts = self.legs * self.rows
+            ends = [experiment.length_km * (i + 1) / parts for i in range(parts)]
             self._tracks[samples] = Track(self._sections[samples], grid, ends)
         return self._tracks[samples]
 
@@ -161,9 +172,11 @@ class Passage:
         """The line in this leg's kind of steps, leg by leg."""
         if leg not in self._pieces:
             made: list[list[Piece]] = [[]]
+            row = 0
             for piece in self.track(leg.samples).pieces(self.weights, leg.steps):
                 made[-1].append(piece)
-                if piece.recorded:
+                row += piece.recorded
+                if piece.recorded and row % self.rows == 0:
                     made.append([])
             self._pieces[leg] = made[:-1]
         return self._pieces[leg]
@@ -186,13 +199,14 @@ class Passage:
         first: int = 0,
         guard: float = 1.0,
         checked: bool = True,
-        observe: Callable[[int, Field], None] | None = None,
+        observe: Observer | None = None,
     ) -> Trip:
         """Take launched fields, or those at the end of leg ``first`` − 1, down a schedule.
 
         guard: see :meth:`Track.march`. Unchecked, the schedule is kept whatever the light does.
-        observe: called with the number of each leg and a field whose powers are right at its end.
-        The trip's schedule tells what the legs took.
+        observe: called with the number of each row of the line and a field whose powers are right
+        at its end, once more when its leg is gone over again. The trip's schedule tells what the
+        legs took.
         """
         wave = Wave(field)
         limit = self.edge_limit if checked else math.inf
@@ -209,7 +223,13 @@ class Passage:
                     wave = kept.again(leg.samples)
                 pieces = self.pieces(leg)[index]
                 outcome = self.track(leg.samples).march(
-                    wave, pieces, self.scheme, edge_limit=limit, guard=guard
+                    wave,
+                    pieces,
+                    self.scheme,
+                    edge_limit=limit,
+                    guard=guard,
+                    observe=observe and _from_row(index * self.rows, observe),
+                    sparing=True,
                 )
                 count = sum(piece.steps for piece in pieces)
                 spent += count * self.scheme.transforms_per_step
@@ -225,10 +245,13 @@ class Passage:
                 break
             done.append(leg)
             steps += count
-            if observe is not None:
-                observe(index, wave.field)
         wave.settle()
         return Trip(wave.field.copy(), tuple(done), steps, spent, outcome)
+
+
+def _from_row(first: int, observe: Observer) -> Observer:
+    """An observer of rows counted from 1, for one of rows of the line counted from 0."""
+    return lambda row, field: observe(first + row - 1, field)
 
 
 def _noise(seed: int, realizations: range, grid: Grid, complex_type: type) -> Field:
