@@ -1,5 +1,6 @@
 """The application: everything put together."""
 
+import asyncio
 import logging
 import sqlite3
 from collections.abc import AsyncIterator
@@ -27,10 +28,12 @@ from server.stream import Board
 from server.validation import first_problem
 from server.wording import is_full_disk
 from solver.experiment import Study
-from solver.study import prepare
+from solver.study import plan, prepare
 
 _log = logging.getLogger("crossdip")
 
+AFTER_ALL_ELSE = -(10**9)
+"""Priority of what may wait as long as there is anything else to do."""
 _HTTP_CODES = {404: "not_found", 405: "method_not_allowed"}
 _HTTP_MESSAGES = {
     404: "there is nothing at this address: see /openapi.json for what there is",
@@ -58,9 +61,12 @@ def create_app(settings: Settings, storage: Storage | None = None) -> FastAPI:
         app.state.sessions = Sessions(database, all_runs)
         engine.start(partial(prepare, Study()))
         await all_runs.open()
+        planning = asyncio.create_task(_plan_while_idle(engine, settings))
         try:
             yield
         finally:
+            planning.cancel()
+            await asyncio.gather(planning, return_exceptions=True)
             board.close()
             await all_runs.close()
             await engine.stop()
@@ -87,6 +93,14 @@ def create_app(settings: Settings, storage: Storage | None = None) -> FastAPI:
     app.add_middleware(BodyLimit)
     app.add_middleware(SecurityHeaders)
     return app
+
+
+async def _plan_while_idle(engine: Engine, settings: Settings) -> None:
+    """Have transforms planned that most studies need: half a second each, once on a machine."""
+    place, more = 0, not settings.cluster.address
+    while more:
+        more = await engine.run(plan, Study(), place, priority=AFTER_ALL_ELSE)
+        place += 1
 
 
 def _handle_errors(app: FastAPI) -> None:

@@ -300,7 +300,8 @@ class Engine:
             security=distributed.Security.temporary(),
             local_directory=str(self._scratch),
             preload=["server.worker"],
-            silence_logs=logging.ERROR,
+            # Errors of tasks reach whoever waits for them; a worker that is ended has nothing to say.
+            silence_logs=logging.CRITICAL,
         )
 
     async def _warm(self, warm: Callable[[], object]) -> None:

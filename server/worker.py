@@ -4,6 +4,7 @@ import hashlib
 import os
 from functools import cache
 from importlib import metadata
+from importlib.util import find_spec
 from pathlib import Path
 from typing import Any
 
@@ -28,7 +29,9 @@ def offer() -> str:
     for path in sorted(Path(experiment.__file__).parent.glob("*.py")):
         source.update(path.name.encode() + b"\0" + path.read_bytes() + b"\0")
     digest = source.hexdigest()[:8]
-    return f"{OFFER}{version} (numerics {experiment.NUMERICS}, solver {digest})"
+    # Whether transforms are planned decides last bits; the web process is not to load them.
+    library = "FFTW" if find_spec("pyfftw") else "scipy"
+    return f"{OFFER}{version} (numerics {experiment.NUMERICS}, solver {digest}, {library})"
 
 
 def dask_setup(worker: Any) -> None:

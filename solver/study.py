@@ -55,6 +55,21 @@ def prepare(study: Study) -> None:
     execute(RoundTask("warm-round", 0, 0, 0, first, first=0, count=PILOTED, schedule=None))
 
 
+def plan(study: Study, place: int) -> bool:
+    """Plan one of the usual shapes of transforms of a study, on the machine this runs on.
+
+    Whether there are more to plan, at the next place.
+    """
+    from solver import transforms  # here, so that the server can import this module without it
+
+    ensemble = study.experiment.ensemble
+    shapes = transforms.usual_shapes(
+        max(ensemble.samples // 4, 2), 2 * ensemble.samples, ensemble.precision, PILOTED
+    )
+    transforms.plan_ahead(shapes[place : place + 1])
+    return place + 1 < len(shapes)
+
+
 @dataclass(frozen=True)
 class Progress:
     """How far a study has got; ``fraction`` is an estimate in [0, 1]."""

@@ -165,7 +165,7 @@ PROVIDER: Callable[[int, int, Precision], Transforms] = (
 """Makes all transforms of this process."""
 
 
-@lru_cache(maxsize=16)
+@lru_cache(maxsize=24)
 def transforms(realizations: int, samples: int, precision: Precision) -> Transforms:
     """The transforms of a shape, one set per process: not to be held across calls."""
     return PROVIDER(realizations, samples, precision)
