@@ -300,7 +300,7 @@ class Engine:
             security=distributed.Security.temporary(),
             local_directory=str(self._scratch),
             preload=["server.worker"],
-            # Errors of tasks reach whoever waits for them; a worker that is ended has nothing to say.
+            # Whoever waits for a task hears of its errors; an ended worker has nothing to say.
             silence_logs=logging.CRITICAL,
         )
 
