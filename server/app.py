@@ -28,7 +28,7 @@ from server.stream import Board
 from server.validation import first_problem
 from server.wording import is_full_disk
 from solver.experiment import Study
-from solver.study import plan, prepare
+from solver.study import plan_transforms, prepare
 
 _log = logging.getLogger("crossdip")
 
@@ -99,7 +99,7 @@ async def _plan_while_idle(engine: Engine, settings: Settings) -> None:
     """Have transforms planned that most studies need: half a second each, once on a machine."""
     place, more = 0, not settings.cluster.address
     while more:
-        more = await engine.run(plan, Study(), place, priority=AFTER_ALL_ELSE)
+        more = await engine.run(plan_transforms, Study(), place, priority=AFTER_ALL_ELSE)
         place += 1
 
 

@@ -55,7 +55,7 @@ def prepare(study: Study) -> None:
     execute(RoundTask("warm-round", 0, 0, 0, first, first=0, count=PILOTED, schedule=None))
 
 
-def plan(study: Study, place: int) -> bool:
+def plan_transforms(study: Study, place: int) -> bool:
     """Plan one of the usual shapes of transforms of a study, on the machine this runs on.
 
     Whether there are more to plan, at the next place.
