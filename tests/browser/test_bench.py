@@ -67,7 +67,7 @@ def test_the_headline_study_at_a_reduced_ensemble_draws_itself(
         box = page.locator(f'[data-plot="{plot}"]')
         box.scroll_into_view_if_needed()
         wait_for_plot(page, plot)
-    assert "derivative, linear regime" in curves(page, "cross")
+    wait_for_values(page, "cross", "derivative, linear regime", 10)
     expect(page.locator("[data-readout]")).to_contain_text("Walls")
 
     with page.expect_download() as kept:
@@ -296,7 +296,10 @@ def test_the_difference_from_the_first_variant(page: Page, lab: LiveServer, done
     for value, one, other in zip(drawn, second, first, strict=True):
         assert other["difference"] is None
         if one["realizations"] == other["realizations"] == one["difference"]["realizations"]:
-            assert value == pytest.approx(one["value"] - other["value"], abs=1e-6)
+            # A difference is controlled by both launches, the value of a curve by its own.
+            assert (
+                abs(value - (one["value"] - other["value"])) < one["difference"]["standard_error"]
+            )
 
 
 def test_a_page_survives_the_server_being_killed_and_started_again(

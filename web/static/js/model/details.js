@@ -35,6 +35,11 @@ export class Details {
   /** Fetch the whole map of a point unless it is here already. */
   wantMap(variant, point) {
     this.#mapWanted = [variant, point];
+    this.hurry();
+  }
+
+  /** Fetch what is missing without waiting: the run has ended, or somebody asked for it. */
+  hurry() {
     clearTimeout(this.#timer);
     this.#timer = null;
     this.#schedule(0);

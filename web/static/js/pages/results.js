@@ -85,7 +85,10 @@ export class Results {
       this.#details.stale();
       if (changed.some(({ has_map: has }) => has)) this.#drawMaps();
       this.#tablesSoon();
-    } else if (type === "state") this.selection.refresh();
+    } else if (type === "state") {
+      this.selection.refresh();
+      if (!this.#run.active) this.#details.hurry();
+    }
   }
 
   /** Go along with the variant's curve as it gets further. */
