@@ -43,6 +43,13 @@ class OutOfRange(ServerError):
     code = "out_of_range"
 
 
+class UnreadableFile(ServerError):
+    """A file whose content cannot be taken; ``where`` is the choice that would have it taken."""
+
+    status = 422
+    code = "unreadable"
+
+
 class BadRequest(ServerError):
     """A request that cannot be read."""
 

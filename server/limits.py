@@ -1,19 +1,23 @@
 """What this server was started for: larger studies are refused before anything is built."""
 
-from typing import Any
+from typing import Any, TypeGuard
 
 from server.errors import OverLimit
 from server.settings import Settings
-from solver.experiment import Study
+from solver.experiment import Study, Sweep
 
 
 def _within(value: Any, limit: int, where: str, noun: str, flag: str) -> None:
-    if isinstance(value, int | float) and not isinstance(value, bool) and value > limit:
+    if _is_number(value) and value > limit:
         raise OverLimit(
             f"{_grouped(value)} {noun} are more than this server allows, {_grouped(limit)}: use "
             f"at most {_grouped(limit)}, or start the server with a larger --{flag}",
             where,
         )
+
+
+def _is_number(value: object) -> TypeGuard[float]:
+    return isinstance(value, int | float) and not isinstance(value, bool)
 
 
 def _grouped(number: float) -> str:
@@ -39,12 +43,14 @@ def refuse_oversize(body: object, settings: Settings) -> None:
                 if path.startswith("ensemble.")
             }
             _check_ensemble(changed, f"variants.{index}.changes", settings)
-    sweep = body.get("sweep")
-    points = sweep.get("points") if isinstance(sweep, dict) else None
-    if isinstance(points, int | float) and not isinstance(points, bool):
+    usual = Sweep().points
+    sweep, second = body.get("sweep"), body.get("second")
+    points = sweep.get("points", usual) if isinstance(sweep, dict) else usual
+    seconds = second.get("points", usual) if isinstance(second, dict) else 1
+    if _is_number(points) and _is_number(seconds):
         _within(
-            points * max(count, 1), settings.max_points, "sweep.points",
-            "points (variants × sweep points)", "max-points",
+            points * seconds * max(count, 1), settings.max_points, "sweep.points",
+            "points (variants × points of both sweeps)", "max-points",
         )  # fmt: skip
 
 

@@ -1,12 +1,16 @@
 """What applies to every request and response."""
 
 from starlette.datastructures import MutableHeaders
+from starlette.requests import ClientDisconnect
 from starlette.types import ASGIApp, Message, Receive, Scope, Send
 
 from server.errors import TooLarge, error_response
 
 BODY_LIMIT_BYTES = 1_048_576
 DRAIN_LIMIT_BYTES = 33_554_432
+UPLOAD_LIMIT_BYTES = 40 * 1_048_576
+UPLOADS = frozenset({"/api/spectra"})
+"""Where files arrive. Their bodies are read by the route, after the gate, and not here."""
 
 SECURITY_HEADERS = {
     # The hash is that of an empty style element, which the plotting library inserts and then
@@ -54,29 +58,43 @@ class BodyLimit:
 
     async def __call__(self, scope: Scope, receive: Receive, send: Send) -> None:
         """ASGI entry."""
-        if scope["type"] != "http" or scope["method"] in {"GET", "HEAD", "OPTIONS"}:
+        safe = scope["type"] != "http" or scope["method"] in {"GET", "HEAD", "OPTIONS"}
+        if safe or scope["path"] in UPLOADS:
             await self._app(scope, receive, send)
             return
-        body: bytes | None = b""
-        taken_bytes = 0
-        more = True
-        # A body that is too large is still taken in and thrown away, up to a point: a client
-        # whose writing is cut off sees a broken connection in place of the answer.
-        while more and taken_bytes < DRAIN_LIMIT_BYTES:
-            message = await receive()
-            if message["type"] != "http.request":
-                return
-            piece = message.get("body", b"")
-            taken_bytes += len(piece)
-            body = body + piece if body is not None and taken_bytes <= BODY_LIMIT_BYTES else None
-            more = message.get("more_body", False)
-        if body is None:
-            error = TooLarge(
-                f"the body is larger than {BODY_LIMIT_BYTES // 1024} KiB: a study is far smaller"
-            )
+        try:
+            body = await read_body(receive, BODY_LIMIT_BYTES)
+        except ClientDisconnect:
+            return
+        except TooLarge as error:
             await error_response(error, {"Connection": "close"})(scope, receive, send)
             return
         await self._app(scope, _replay(body, receive), send)
+
+
+async def read_body(receive: Receive, limit_bytes: int) -> bytes:
+    """The whole body of a request; raises TooLarge, and ClientDisconnect when it breaks off."""
+    body = bytearray()
+    taken_bytes = 0
+    more = True
+    # A body that is too large is still taken in and thrown away, up to a point: a client
+    # whose writing is cut off sees a broken connection in place of the answer.
+    while more and taken_bytes < limit_bytes + DRAIN_LIMIT_BYTES:
+        message = await receive()
+        if message["type"] != "http.request":
+            raise ClientDisconnect
+        piece = message.get("body", b"")
+        taken_bytes += len(piece)
+        if taken_bytes <= limit_bytes:
+            body += piece
+        else:
+            body.clear()
+        more = message.get("more_body", False)
+    if taken_bytes > limit_bytes:
+        size = f"{limit_bytes // 1024} KiB" if limit_bytes < 2**21 else f"{limit_bytes >> 20} MiB"
+        remedy = "a study is far smaller" if limit_bytes == BODY_LIMIT_BYTES else "thin the file"
+        raise TooLarge(f"the body is larger than {size}: {remedy}")
+    return bytes(body)
 
 
 def _replay(body: bytes, receive: Receive) -> Receive:

@@ -1,7 +1,7 @@
-"""Every parameter of an experiment and of a study: name, unit, bound, default and help.
+"""An experiment, and a study of it: everything that fixes a result.
 
-This is the one definition. The API schema, the page's form, the study file of the command
-line and the attributes of the result file are all read from the models below.
+The parameters themselves are defined once, in :mod:`solver.sending`, :mod:`solver.span` and
+:mod:`solver.receiving`.
 
 Paths such as ``"launch.total_power_mw"`` or ``"line.*.coupling"`` name a parameter inside an
 :class:`Experiment`; ``*`` stands for every span of the line.
@@ -11,413 +11,62 @@ import hashlib
 import json
 import math
 from collections.abc import Iterator
+from contextlib import contextmanager
 from typing import Annotated, Any, Literal, Self
 
-from pydantic import BaseModel, ConfigDict, Field, JsonValue, model_validator
+from pydantic import Field, JsonValue, model_validator
 
-from solver.units import beta2_from_dispersion
+from solver.extent import Suggestion, spread_ps, suggest
+from solver.quantity import Contradiction, Stage, quantity
+from solver.receiving import Ensemble, FilterShape, Precision, Receiver
+from solver.sending import (
+    Amplifier,
+    Launch,
+    MeasuredSpectrum,
+    Relation,
+    RelationKind,
+    Shaper,
+    Source,
+    SpectrumShape,
+)
+from solver.span import COUPLING_COEFFICIENTS, Coupling, Span
 
-NUMERICS = "2"
+__all__ = [
+    "AXES_OF",
+    "COUPLING_COEFFICIENTS",
+    "HEADLINE_VARIANTS",
+    "NUMERICS",
+    "Amplifier",
+    "Contradiction",
+    "Coupling",
+    "Ensemble",
+    "Experiment",
+    "FilterShape",
+    "Launch",
+    "Line",
+    "MeasuredSpectrum",
+    "Precision",
+    "Receiver",
+    "Relation",
+    "RelationKind",
+    "Shaper",
+    "Source",
+    "Span",
+    "SpectrumShape",
+    "Stage",
+    "Study",
+    "Sweep",
+    "Variant",
+    "numeric_parameters",
+    "title_and_unit",
+    "with_changes",
+]
+
+NUMERICS = "3"
 """Version of everything that decides a result's digits; part of a study's identity."""
 
-SpectrumShape = Literal["gaussian", "super_gaussian", "rectangular", "sech2"]
-RelationKind = Literal["independent", "derivative", "hilbert", "delayed", "partial", "identical"]
-Coupling = Literal["manakov", "linear_birefringent", "isotropic_circular", "uncoupled", "custom"]
-Precision = Literal["single", "double"]
-FilterShape = Literal["none", "gaussian", "bessel4", "butterworth4"]
-
-COUPLING_COEFFICIENTS: dict[str, tuple[float, float]] = {
-    "manakov": (8 / 9, 8 / 9),
-    "linear_birefringent": (1.0, 2 / 3),
-    "isotropic_circular": (2 / 3, 4 / 3),
-    "uncoupled": (8 / 9, 0.0),
-}
-"""(self, cross) Kerr coefficients of each named coupling."""
-
-
-class Contradiction(ValueError):
-    """Parameters that exclude one another; ``where`` is the path of the one to change."""
-
-    def __init__(self, where: str, message: str) -> None:
-        super().__init__(message)
-        self.where = where
-
-
-def quantity(
-    default: Any,
-    title: str,
-    help: str,
-    *,
-    unit: str = "",
-    low: float | None = None,
-    high: float | None = None,
-    when: dict[str, list[str]] | None = None,
-    **extra: Any,
-) -> Any:
-    """A pydantic field with the metadata the form needs.
-
-    ``when`` names sibling parameters and the values for which this one applies.
-    """
-    schema: dict[str, JsonValue] = {"unit": unit}
-    if when:
-        schema["when"] = {name: list(values) for name, values in when.items()}
-    return Field(
-        default,
-        title=title,
-        description=help,
-        ge=low,
-        le=high,
-        json_schema_extra=schema,
-        **extra,
-    )
-
-
-class Stage(BaseModel):
-    """Base of every stage: frozen, strict about unknown names, no NaN and no infinity."""
-
-    model_config = ConfigDict(frozen=True, extra="forbid", allow_inf_nan=False)
-
-
-class Source(Stage):
-    """Thermal-like light: circular complex Gaussian noise under a power spectrum."""
-
-    shape: SpectrumShape = quantity(
-        "gaussian", "Spectrum", "Shape of the power spectrum of the source."
-    )
-    width_ghz: float = quantity(
-        24.0,
-        "Width",
-        "Full width at half maximum of the power spectrum.",
-        unit="GHz",
-        low=0.1,
-        high=5000.0,
-    )
-    order: int = quantity(
-        4,
-        "Order",
-        "Order m of the super-Gaussian exp(−|f/f0|^2m); 1 is a Gaussian.",
-        low=1,
-        high=20,
-        when={"shape": ["super_gaussian"]},
-    )
-    wavelength_nm: float = quantity(
-        1552.0,
-        "Wavelength",
-        "Centre wavelength; converts dispersion D into β2.",
-        unit="nm",
-        low=400.0,
-        high=2500.0,
-    )
-
-
-class Relation(Stage):
-    """How component 2 is made from component 1."""
-
-    kind: RelationKind = quantity(
-        "independent",
-        "Input relation",
-        "Component 2 is an independent draw, or component 1 through the named filter.",
-    )
-    notch_ghz: float = quantity(
-        0.0,
-        "Notch",
-        "Full width of the blocked band around the carrier, where no real shaper makes the "
-        "ideal sign step.",
-        unit="GHz",
-        low=0.0,
-        high=1000.0,
-        when={"kind": ["hilbert"]},
-    )
-    delay_ps: float = quantity(
-        50.0,
-        "Delay",
-        "Delay of component 2 against component 1.",
-        unit="ps",
-        low=-1e5,
-        high=1e5,
-        when={"kind": ["delayed"]},
-    )
-    correlation: float = quantity(
-        0.5,
-        "Shared power",
-        "Fraction ρ of component 2's power that repeats component 1; the rest is independent.",
-        low=0.0,
-        high=1.0,
-        when={"kind": ["partial"]},
-    )
-
-
-class Launch(Stage):
-    """Powers and imperfections at the fibre input."""
-
-    total_power_mw: float = quantity(
-        200.0,
-        "Total power",
-        "Mean launch power of both components together.",
-        unit="mW",
-        low=1e-6,
-        high=1e5,
-    )
-    share_1: float = quantity(
-        0.5,
-        "Share of component 1",
-        "Fraction of the total power launched into component 1.",
-        low=0.0,
-        high=1.0,
-    )
-    skew_ps: float = quantity(
-        0.0,
-        "Skew",
-        "Extra delay of component 2 at the input, whatever the relation.",
-        unit="ps",
-        low=-1e5,
-        high=1e5,
-    )
-    crosstalk_db: float | None = quantity(
-        None,
-        "Crosstalk",
-        "Power leaking from each component into the other at the launch; empty for none.",
-        unit="dB",
-        low=-100.0,
-        high=-3.0,
-    )
-
-
-class Span(Stage):
-    """One uniform piece of fibre. What is not given is absent."""
-
-    length_km: float = quantity(
-        ..., "Length", "Length of the span.", unit="km", low=1e-6, high=10_000.0
-    )
-    dispersion_ps_per_nm_km: float | None = quantity(
-        None,
-        "Dispersion D",
-        "Chromatic dispersion; negative is normal. Give this or β2.",
-        unit="ps/(nm·km)",
-        low=-10_000.0,
-        high=10_000.0,
-    )
-    beta2_ps2_per_km: float | None = quantity(
-        None,
-        "β2",
-        "Group-velocity dispersion; positive is normal. Give this or D.",
-        unit="ps²/km",
-        low=-10_000.0,
-        high=10_000.0,
-    )
-    beta3_ps3_per_km: float = quantity(
-        0.0, "β3", "Third-order dispersion.", unit="ps³/km", low=-1000.0, high=1000.0
-    )
-    loss_db_per_km: float = quantity(0.0, "Loss", "Power loss.", unit="dB/km", low=0.0, high=1000.0)
-    gamma_per_w_km: float = quantity(
-        0.0,
-        "Nonlinear coefficient γ",
-        "Kerr coefficient before the factors of the coupling.",
-        unit="1/(W·km)",
-        low=0.0,
-        high=10_000.0,
-    )
-    coupling: Coupling = quantity(
-        "manakov",
-        "Coupling",
-        "Self and cross Kerr factors: manakov 8/9, 8/9; linear_birefringent 1, 2/3; "
-        "isotropic_circular 2/3, 4/3; uncoupled 8/9, 0; custom as given.",
-    )
-    self_coefficient: float | None = quantity(
-        None,
-        "Self factor",
-        "Kerr factor of a component's own power.",
-        low=0.0,
-        high=10.0,
-        when={"coupling": ["custom"]},
-    )
-    cross_coefficient: float | None = quantity(
-        None,
-        "Cross factor",
-        "Kerr factor of the other component's power.",
-        low=0.0,
-        high=10.0,
-        when={"coupling": ["custom"]},
-    )
-    delay_ps_per_km: float = quantity(
-        0.0,
-        "Group-delay difference δ",
-        "Delay of component 1 behind component 2, per km.",
-        unit="ps/km",
-        low=-10_000.0,
-        high=10_000.0,
-    )
-    pmd_ps_per_sqrt_km: float = quantity(
-        0.0,
-        "PMD",
-        "Polarization-mode dispersion coefficient: mean differential delay over √length.",
-        unit="ps/√km",
-        low=0.0,
-        high=100.0,
-    )
-
-    @model_validator(mode="after")
-    def _consistent(self) -> Self:
-        if self.dispersion_ps_per_nm_km is None and self.beta2_ps2_per_km is None:
-            raise Contradiction(
-                "dispersion_ps_per_nm_km",
-                "give the dispersion: dispersion_ps_per_nm_km or beta2_ps2_per_km",
-            )
-        if self.dispersion_ps_per_nm_km is not None and self.beta2_ps2_per_km is not None:
-            raise Contradiction(
-                "beta2_ps2_per_km",
-                "dispersion_ps_per_nm_km and beta2_ps2_per_km are both given: keep one of them",
-            )
-        for name in ("self_coefficient", "cross_coefficient"):
-            given = getattr(self, name) is not None
-            if self.coupling == "custom" and not given:
-                raise Contradiction(name, f"coupling custom needs {name}")
-            if self.coupling != "custom" and given:
-                raise Contradiction(
-                    name, f"{name} applies to coupling custom only: leave it out or choose custom"
-                )
-        if self.pmd_ps_per_sqrt_km and self.coupling != "manakov":
-            raise Contradiction(
-                "pmd_ps_per_sqrt_km",
-                "random polarization-mode dispersion mixes the components, which only the "
-                "manakov coupling allows: choose manakov or set it to 0",
-            )
-        return self
-
-    def beta2(self, wavelength_nm: float) -> float:
-        """β2 in ps²/km, from whichever of D and β2 was given."""
-        if self.beta2_ps2_per_km is not None:
-            return self.beta2_ps2_per_km
-        assert self.dispersion_ps_per_nm_km is not None
-        return beta2_from_dispersion(self.dispersion_ps_per_nm_km, wavelength_nm)
-
-    def kerr_coefficients(self) -> tuple[float, float]:
-        """(self, cross) factors that multiply γ."""
-        if self.self_coefficient is not None and self.cross_coefficient is not None:
-            return self.self_coefficient, self.cross_coefficient
-        return COUPLING_COEFFICIENTS[self.coupling]
-
-
-class Receiver(Stage):
-    """Polarization demultiplexer and square-law detection."""
-
-    extinction_db: float | None = quantity(
-        None,
-        "Demultiplexer extinction",
-        "Power of the unwanted component in each arm; empty for ideal.",
-        unit="dB",
-        low=-100.0,
-        high=-3.0,
-    )
-    filter: FilterShape = quantity(
-        "none",
-        "Electrical low-pass",
-        "Response of photodiode and digitizer together; none for an ideal receiver.",
-    )
-    bandwidth_ghz: float = quantity(
-        33.0,
-        "Bandwidth",
-        "Frequency at which the electrical power transfer |H|² is one half.",
-        unit="GHz",
-        low=0.01,
-        high=1000.0,
-        when={"filter": ["gaussian", "bessel4", "butterworth4"]},
-    )
-
-
-class Ensemble(Stage):
-    """Grid, draws and estimators."""
-
-    window_ps: float = quantity(
-        8192.0, "Window", "Periodic time window.", unit="ps", low=1.0, high=1e7
-    )
-    samples: int = quantity(
-        4096,
-        "Samples",
-        "Samples in the window, a power of two.",
-        low=256,
-        high=2**22,
-    )
-    standard_error_target: float = quantity(
-        0.01,
-        "Standard error target",
-        "Realizations are added to each point until the standard error of C12(0) is this small.",
-        low=1e-5,
-        high=0.5,
-    )
-    min_realizations: int = quantity(
-        16,
-        "Fewest realizations",
-        "Realizations before the target is looked at.",
-        low=4,
-        high=100_000,
-    )
-    max_realizations: int = quantity(
-        256,
-        "Most realizations",
-        "Cap for each point; a point that stops here says so.",
-        low=4,
-        high=1_000_000,
-    )
-    seed: int = quantity(20, "Seed", "Fixes every random draw.", low=0, high=2**53 - 1)
-    precision: Precision = quantity(
-        "single", "Precision", "Arithmetic of the ensemble; single is enough for statistics."
-    )
-    field_tolerance: float = quantity(
-        0.05,
-        "Field tolerance",
-        "Relative L2 error of the field allowed in the ensemble. Steps are also short enough to "
-        "keep the bias of C12(0) under a tenth of the standard error target.",
-        low=1e-9,
-        high=0.3,
-    )
-    distances: int = quantity(
-        16,
-        "Distances",
-        "Equal parts of the line at whose ends C12(0) is recorded.",
-        low=1,
-        high=128,
-    )
-    max_lag_ps: float = quantity(
-        400.0, "Longest lag", "Correlations are kept up to this lag.", unit="ps", low=1.0, high=1e5
-    )
-    wall_smoothing_ps: float = quantity(
-        8.0,
-        "Wall smoothing",
-        "Width of the running mean of S0 and S1 before walls are counted as sign changes.",
-        unit="ps",
-        low=0.0,
-        high=1e4,
-    )
-
-    @model_validator(mode="after")
-    def _consistent(self) -> Self:
-        if self.samples & (self.samples - 1):
-            near = 2 ** round(math.log2(self.samples))
-            raise Contradiction("samples", f"samples must be a power of two: {near} is the nearest")
-        if self.max_realizations < self.min_realizations:
-            raise Contradiction(
-                "max_realizations",
-                f"max_realizations must be at least min_realizations, {self.min_realizations}",
-            )
-        if self.max_lag_ps > self.window_ps / 2:
-            raise Contradiction(
-                "max_lag_ps",
-                f"max_lag_ps must be at most half the window, {self.window_ps / 2:g} ps",
-            )
-        if self.precision == "single" and self.field_tolerance < 1e-3:
-            raise Contradiction(
-                "field_tolerance",
-                "single precision cannot resolve a field tolerance below 1e-3: "
-                "choose double or loosen the tolerance",
-            )
-        return self
-
-    @property
-    def time_step_ps(self) -> float:
-        """Time between samples, ps."""
-        return self.window_ps / self.samples
-
+MOST_DELAY_LOSS_DB = 40.0
+"""Power that a shaper's resolution may take from delayed light."""
 
 Line = Annotated[
     tuple[Span, ...],
@@ -435,6 +84,8 @@ class Experiment(Stage):
 
     source: Source = Source()
     relation: Relation = Relation()
+    shaper: Shaper = Shaper()
+    booster: Amplifier = Amplifier()
     launch: Launch = Launch()
     line: Line = (
         Span(
@@ -444,39 +95,112 @@ class Experiment(Stage):
             gamma_per_w_km=2.5,
         ),
     )
+    preamplifier: Amplifier = Amplifier()
     receiver: Receiver = Receiver()
     ensemble: Ensemble = Ensemble()
 
     @model_validator(mode="after")
     def _fits_grid(self) -> Self:
+        self._leaves_light()
+        if self.ensemble.grid == "automatic":
+            return self  # chosen, and then checked, with the study
         nyquist_ghz = 500.0 / self.ensemble.time_step_ps
-        if self.source.width_ghz > nyquist_ghz / 2:
+        if self.source.full_width_ghz > nyquist_ghz / 2:
             needed = 2 ** math.ceil(
-                math.log2(self.ensemble.window_ps * self.source.width_ghz * 4 / 1000.0)
+                math.log2(self.ensemble.window_ps * self.source.full_width_ghz * 4 / 1000.0)
             )
             raise Contradiction(
                 "ensemble.samples",
-                f"the source, {self.source.width_ghz:g} GHz wide, does not fit the grid, which "
-                f"holds ±{nyquist_ghz:g} GHz: use {needed} samples or more in this window",
+                f"the source, {self.source.full_width_ghz:g} GHz wide, does not fit the grid, "
+                f"which holds ±{nyquist_ghz:g} GHz: use {needed} samples or more in this window"
+                + (", or take the noise floor off the spectrum" if self.source.measured else ""),
             )
-        if self.source.width_ghz * self.ensemble.window_ps < 8000.0:
+        if self.source.coherence_width_ghz * self.ensemble.window_ps < 8000.0:
             raise Contradiction(
                 "ensemble.window_ps",
                 "the window holds fewer than 8 coherence times of the source: use at least "
-                f"{8000.0 / self.source.width_ghz:.4g} ps",
+                f"{8000.0 / self.source.coherence_width_ghz:.4g} ps",
             )
-        if self.relation.kind == "hilbert" and self.relation.notch_ghz > self.source.width_ghz:
+        self._delays_within_window()
+        if self.booster.noise_figure_db is not None and self.booster.bandpass_ghz is None:
+            raise Contradiction(
+                "booster.bandpass_ghz",
+                "the noise of a booster fills any grid: give the optical band-pass after it, "
+                f"{4 * self.source.full_width_ghz:.3g} GHz for example",
+            )
+        for name in ("booster", "preamplifier"):
+            band_ghz = getattr(self, name).bandpass_ghz
+            if band_ghz is not None and band_ghz > nyquist_ghz:
+                raise Contradiction(
+                    f"{name}.bandpass_ghz",
+                    f"a band-pass of {band_ghz:g} GHz does not fit the grid, which holds "
+                    f"±{nyquist_ghz:g} GHz: use {nyquist_ghz:g} GHz or less, or more samples",
+                )
+        self._outlasts_line()
+        return self
+
+    def _leaves_light(self) -> None:
+        """A filter that blocks the whole source would be made up for by boundless gain."""
+        relation, shaper = self.relation, self.shaper
+        widest_ghz = self.source.widest_notch_ghz
+        if relation.kind == "hilbert" and relation.notch_ghz > widest_ghz:
             raise Contradiction(
                 "relation.notch_ghz",
-                "the notch removes the source: use at most its width, "
-                f"{self.source.width_ghz:g} GHz",
+                f"a notch of {relation.notch_ghz:g} GHz about the carrier removes the source: use "
+                f"at most {math.floor(1e3 * widest_ghz) / 1e3:g} GHz",
             )
-        return self
+        if relation.kind == "delayed" and shaper.resolution_ghz:
+            # A Gaussian resolution of rms s is a Gaussian window over delays, of rms 1/(2πs).
+            spread_thz = 1e-3 * shaper.resolution_ghz / math.sqrt(8.0 * math.log(2.0))
+            loss_db = 10.0 / math.log(10.0) * (2.0 * math.pi * spread_thz * relation.delay_ps) ** 2
+            if loss_db > MOST_DELAY_LOSS_DB:
+                within = math.sqrt(MOST_DELAY_LOSS_DB / loss_db)
+                raise Contradiction(
+                    "shaper.resolution_ghz",
+                    f"a shaper that resolves {shaper.resolution_ghz:g} GHz passes nothing at a "
+                    f"delay of {relation.delay_ps:g} ps: use a resolution of "
+                    f"{_floored(within * shaper.resolution_ghz):g} GHz or less, or a delay of at "
+                    f"most {_floored(within * abs(relation.delay_ps)):g} ps",
+                )
+
+    def _delays_within_window(self) -> None:
+        """A delay beyond half of a periodic window is seen as the rest to the whole window."""
+        window_ps = self.ensemble.window_ps
+        delay_ps = self.relation.delay_ps if self.relation.kind == "delayed" else 0.0
+        total_ps = abs(delay_ps + self.launch.skew_ps)
+        if total_ps > window_ps / 2:
+            raise Contradiction(
+                "relation.delay_ps" if abs(delay_ps) > window_ps / 2 else "launch.skew_ps",
+                f"the components are {total_ps:g} ps apart at the launch, more than half the "
+                f"window: use a window of {2.0 * total_ps:g} ps or more, or at most "
+                f"{window_ps / 2:g} ps between them",
+            )
+
+    def _outlasts_line(self) -> None:
+        """In a window shorter than the line's memory, light meets itself come round again."""
+        spread = spread_ps(self, self.source.full_width_ghz)
+        if spread <= self.ensemble.window_ps:
+            return
+        longer = 2 ** math.ceil(math.log2(spread / self.ensemble.window_ps))
+        window_ps, samples = longer * self.ensemble.window_ps, longer * self.ensemble.samples
+        shorter_km = self.length_km * self.ensemble.window_ps / spread
+        raise Contradiction(
+            "ensemble.window_ps",
+            f"the line, {self.length_km:.4g} km, spreads the source over {spread:.4g} ps, more "
+            f"than the window: use a window of {window_ps:g} ps with {samples} samples, or a line "
+            f"of about {shorter_km:.3g} km",
+        )
 
     @property
     def length_km(self) -> float:
         """Length of the whole line, km."""
         return sum(span.length_km for span in self.line)
+
+
+def _floored(value: float) -> float:
+    """A little less, in three digits."""
+    digits = 2 - math.floor(math.log10(value))
+    return math.floor(value * 10.0**digits) / 10.0**digits
 
 
 def _set_path(tree: Any, path: str, value: JsonValue) -> None:
@@ -519,8 +243,11 @@ def numeric_parameters() -> Iterator[tuple[str, str, str]]:
     stages: list[tuple[str, type[Stage]]] = [
         ("source", Source),
         ("relation", Relation),
+        ("shaper", Shaper),
+        ("booster", Amplifier),
         ("launch", Launch),
         ("line.*", Span),
+        ("preamplifier", Amplifier),
         ("receiver", Receiver),
     ]
     for prefix, stage in stages:
@@ -531,8 +258,13 @@ def numeric_parameters() -> Iterator[tuple[str, str, str]]:
                 yield f"{prefix}.{name}", field.title or name, unit
 
 
+def title_and_unit(parameter: str) -> tuple[str, str]:
+    """Title and unit of a parameter that a sweep may run over."""
+    return next((title, unit) for path, title, unit in numeric_parameters() if path == parameter)
+
+
 class Sweep(Stage):
-    """The axis of a study."""
+    """An axis of a study."""
 
     parameter: str = quantity(
         "launch.total_power_mw", "Swept parameter", "Path of the parameter that varies."
@@ -591,15 +323,23 @@ HEADLINE_VARIANTS = (
 )
 
 
-AXES_OF = ("window_ps", "samples", "distances", "max_lag_ps")
+AXES_OF = ("grid", "window_ps", "samples", "distances", "max_lag_ps")
 """Ensemble parameters that fix the axes of a study's results, and so belong to all variants."""
 
 
 class Study(Stage):
-    """An experiment, the axis swept and the variants compared. A run is its study."""
+    """An experiment, the axis swept and the variants compared. A run is its study.
+
+    With a ``second`` axis every variant is a curve for each of its values: see :attr:`curves`.
+    """
 
     experiment: Experiment = Experiment()
     sweep: Sweep = Sweep()
+    second: Sweep | None = Field(
+        default=None,
+        title="Second sweep",
+        description="Another parameter; each variant is computed for each of its values.",
+    )
     variants: Annotated[
         tuple[Variant, ...],
         Field(
@@ -615,46 +355,139 @@ class Study(Stage):
         names = [variant.name for variant in self.variants]
         if len(set(names)) < len(names):
             raise Contradiction("variants", "two variants have the same name: rename one")
-        ends = {self.sweep.start, self.sweep.stop}
-        for index, variant in enumerate(self.variants):
-            for value in ends:
-                try:
-                    made = with_changes(
-                        self.experiment, {**variant.changes, self.sweep.parameter: value}
-                    )
-                    self._share_axes(made)
-                except Contradiction as error:
-                    raise Contradiction(f"variants.{index}.changes", str(error)) from None
-                except ValueError as error:
-                    problem = error.errors()[0] if hasattr(error, "errors") else {}
-                    path = ".".join(str(part) for part in problem.get("loc", ()))
-                    raise Contradiction(
-                        "sweep" if path == self.sweep.parameter else f"variants.{index}.changes",
-                        f"{path or 'experiment'}: {problem.get('msg', error)}",
-                    ) from None
+        if self.second is not None and self.second.parameter == self.sweep.parameter:
+            raise Contradiction(
+                "second.parameter", "both sweeps vary the same parameter: choose another"
+            )
+        if self.experiment.ensemble.grid == "automatic":
+            chosen = self.suggestion()
+            ensemble = self.experiment.ensemble.model_copy(
+                update={"window_ps": chosen.window_ps, "samples": chosen.samples}
+            )
+            # A study is frozen from here on; what it was made of is now complete.
+            object.__setattr__(
+                self, "experiment", self.experiment.model_copy(update={"ensemble": ensemble})
+            )
+        for index, changes in self._corners():
+            with _blamed_on(index, self):
+                self._share_axes(with_changes(self._chosen, changes))
         return self
+
+    def _corners(self) -> Iterator[tuple[int, dict[str, JsonValue]]]:
+        """(variant, changes) at the ends of the sweeps."""
+        seconds: list[dict[str, JsonValue]] = [{}]
+        if self.second is not None:
+            along = self.second.values()
+            ends = dict.fromkeys((along[0], along[-1]))
+            seconds = [{self.second.parameter: value} for value in ends]
+        values = self.sweep.values()
+        for index, variant in enumerate(self.variants):
+            for second in seconds:
+                for value in dict.fromkeys((values[0], values[-1])):
+                    yield index, {**variant.changes, **second, self.sweep.parameter: value}
+
+    @property
+    def _chosen(self) -> Experiment:
+        """The experiment whose grid, chosen for all points together, is given to each of them."""
+        ensemble = self.experiment.ensemble.model_copy(update={"grid": "given"})
+        return self.experiment.model_copy(update={"ensemble": ensemble})
+
+    def suggestion(self) -> Suggestion:
+        """A grid that suits all points; raises Contradiction where none does."""
+        corners = []
+        for index, changes in self._corners():
+            with _blamed_on(index, self):
+                corners.append(with_changes(self.experiment, changes))
+        return suggest(corners)
 
     def _share_axes(self, variant: Experiment) -> None:
         for name in AXES_OF:
-            if getattr(variant.ensemble, name) != getattr(self.experiment.ensemble, name):
+            if getattr(variant.ensemble, name) != getattr(self._chosen.ensemble, name):
                 raise Contradiction(
                     f"ensemble.{name}",
                     f"ensemble.{name} sets an axis that all variants share: change it in the "
                     "experiment",
                 )
+        if variant.receiver.sampling_gsps != self.experiment.receiver.sampling_gsps:
+            raise Contradiction(
+                "receiver.sampling_gsps",
+                "receiver.sampling_gsps sets the axis of lags that all variants share: change it "
+                "in the experiment",
+            )
 
-    def experiment_at(self, variant: int, point: int) -> Experiment:
+    @property
+    def curves(self) -> tuple[Variant, ...]:
+        """One for each variant, or for each variant and value of the second axis.
+
+        Curve ``variant · n + j`` is the variant at value j of the n of the second axis.
+        """
+        if self.second is None:
+            return self.variants
+        title, unit = title_and_unit(self.second.parameter)
+        made = []
+        for variant in self.variants:
+            for value in self.second.values():
+                at = f"{title} {value:.4g} {unit}".rstrip()
+                name = f"{variant.name[: 78 - len(at)]}, {at}" if len(self.variants) > 1 else at
+                changes = {**variant.changes, self.second.parameter: value}
+                made.append(Variant(name=name, changes=changes))
+        return tuple(made)
+
+    @property
+    def seconds(self) -> int:
+        """Values of the second axis; 1 without one."""
+        return 1 if self.second is None else self.second.points
+
+    @property
+    def points_total(self) -> int:
+        """Points of all curves."""
+        return len(self.variants) * self.seconds * self.sweep.points
+
+    def experiment_at(self, curve: int, point: int) -> Experiment:
         """The experiment of one point of one curve."""
-        value = self.sweep.values()[point]
-        changes = {**self.variants[variant].changes, self.sweep.parameter: value}
-        return with_changes(self.experiment, changes)
+        variant, at = divmod(curve, self.seconds)
+        changes = dict(self.variants[variant].changes)
+        if self.second is not None:
+            changes[self.second.parameter] = self.second.values()[at]
+        return with_changes(
+            self._chosen, {**changes, self.sweep.parameter: self.sweep.values()[point]}
+        )
+
+    def first_of(self, curve: int) -> int:
+        """The curve that a curve is compared with: the first variant at the same second value."""
+        return curve % self.seconds
 
     @property
     def identity(self) -> str:
         """Hash of the whole study, seed included, and of the numerics: 16 hexadecimal digits."""
+        study = self.model_dump(mode="json")
+        # Studies that do without what came later keep their identity.
+        if study["second"] is None:
+            del study["second"]
+        if study["experiment"]["ensemble"]["grid"] == "given":
+            del study["experiment"]["ensemble"]["grid"]
         canonical = json.dumps(
-            {"numerics": NUMERICS, "study": self.model_dump(mode="json")},
-            sort_keys=True,
-            separators=(",", ":"),
+            {"numerics": NUMERICS, "study": study}, sort_keys=True, separators=(",", ":")
         )
         return hashlib.sha256(canonical.encode()).hexdigest()[:16]
+
+
+@contextmanager
+def _blamed_on(variant: int, study: Study) -> Iterator[None]:
+    """Say of what makes a point impossible which part of the study is to be changed."""
+    changes = f"variants.{variant}.changes"
+    try:
+        yield
+    except Contradiction as error:
+        raise Contradiction(changes, str(error)) from None
+    except ValueError as error:
+        problem = error.errors()[0] if hasattr(error, "errors") else {}
+        place = problem.get("loc", ())
+        path = ".".join(str(part) for part in place)
+        anywhere = ".".join("*" if isinstance(part, int) else str(part) for part in place)
+        where = changes
+        if study.sweep.parameter in (path, anywhere):
+            where = "sweep"
+        elif study.second is not None and study.second.parameter in (path, anywhere):
+            where = "second"
+        raise Contradiction(where, f"{path or 'experiment'}: {problem.get('msg', error)}") from None

@@ -41,3 +41,22 @@ def effective_length_km(length_km: float, loss_db_per_km: float) -> float:
     """Effective length (1 − e^{−αL})/α in km, the length over which the Kerr phase accrues."""
     alpha = attenuation_per_km(loss_db_per_km)
     return -math.expm1(-alpha * length_km) / alpha if alpha else length_km
+
+
+def beta3_from_slope(
+    dispersion_ps_per_nm_km: float, slope_ps_per_nm2_km: float, wavelength_nm: float
+) -> float:
+    """Third-order dispersion β3 in ps³/km from D and its slope S = dD/dλ in ps/(nm²·km).
+
+    β3 = dβ2/dω = λ³/(2πc)² · (λS + 2D), as follows from D = −2πc β2/λ².
+    """
+    scale = wavelength_nm**3 / (2.0 * math.pi * LIGHT_SPEED_NM_PER_PS) ** 2
+    return scale * (wavelength_nm * slope_ps_per_nm2_km + 2.0 * dispersion_ps_per_nm_km)
+
+
+def slope_from_beta3(
+    dispersion_ps_per_nm_km: float, beta3_ps3_per_km: float, wavelength_nm: float
+) -> float:
+    """Dispersion slope in ps/(nm²·km) from D and β3; undoes :func:`beta3_from_slope`."""
+    scale = wavelength_nm**3 / (2.0 * math.pi * LIGHT_SPEED_NM_PER_PS) ** 2
+    return (beta3_ps3_per_km / scale - 2.0 * dispersion_ps_per_nm_km) / wavelength_nm
