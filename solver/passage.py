@@ -14,11 +14,11 @@ from functools import cached_property, lru_cache
 import numpy as np
 
 from solver.experiment import Experiment
-from solver.fibre import Section, sections
+from solver.fibre import Section, drawn_axes, fibres_are_drawn, sections
 from solver.grid import Complex, Field, Grid
 from solver.propagation import STEP_LIMIT, edge_limit, scheme_for
 from solver.relation import input_response
-from solver.source import draw, synthesize
+from solver.source import BOOSTER, SOURCE, draw, synthesize
 from solver.task import Leg, Schedule
 from solver.track import (
     COMPLETED,
@@ -130,6 +130,7 @@ class Passage:
             self.experiment.ensemble.seed,
             realizations,
             self.grid(self.start_samples),
+            self.response.shape[1] > 2,
             complex_type,
         )
         return synthesize(noise, self.response.astype(complex_type))
@@ -149,6 +150,14 @@ class Passage:
             ends = [experiment.length_km * (i + 1) / parts for i in range(parts)]
             self._tracks[samples] = Track(self._sections[samples], grid, ends)
         return self._tracks[samples]
+
+    def axes(self, realizations: range | None) -> list[Complex | None] | None:
+        """Axes of the sections of these realizations' own fibres; None where all share one."""
+        if not fibres_are_drawn(self.experiment):
+            return None
+        if realizations is None:
+            raise ValueError("each realization has a fibre of its own: say which these are")
+        return drawn_axes(self.experiment.line, self.experiment.ensemble.seed, realizations)
 
     @cached_property
     def weights(self) -> np.ndarray:
@@ -196,20 +205,24 @@ class Passage:
         field: Field,
         schedule: Schedule,
         *,
+        realizations: range | None = None,
         first: int = 0,
         guard: float = 1.0,
         checked: bool = True,
         observe: Observer | None = None,
+        phases: bool = False,
     ) -> Trip:
         """Take launched fields, or those at the end of leg ``first`` − 1, down a schedule.
 
+        realizations: their numbers; needed where each of them has a fibre of its own.
         guard: see :meth:`Track.march`. Unchecked, the schedule is kept whatever the light does.
         observe: called with the number of each row of the line and a field whose powers are right
-        at its end, once more when its leg is gone over again. The trip's schedule tells what the
-        legs took.
+        at its end, and its phases too if ``phases`` asks for them; once more when its leg is gone
+        over again. The trip's schedule tells what the legs took.
         """
         wave = Wave(field)
         limit = self.edge_limit if checked else math.inf
+        axes = self.axes(realizations)
         if not self.weights.any():
             guard = 0.0  # without the Kerr effect no step makes sidebands
         done: list[Leg] = []
@@ -229,7 +242,9 @@ class Passage:
                     edge_limit=limit,
                     guard=guard,
                     observe=observe and _from_row(index * self.rows, observe),
+                    phases=phases,
                     sparing=True,
+                    axes=axes,
                 )
                 count = sum(piece.steps for piece in pieces)
                 spent += count * self.scheme.transforms_per_step
@@ -254,8 +269,9 @@ def _from_row(first: int, observe: Observer) -> Observer:
     return lambda row, field: observe(first + row - 1, field)
 
 
-def _noise(seed: int, realizations: range, grid: Grid, complex_type: type) -> Field:
-    noise: Field = draw(seed, realizations, grid).astype(complex_type)
+def _noise(seed: int, realizations: range, grid: Grid, boosted: bool, complex_type: type) -> Field:
+    drawn = [draw(seed, realizations, grid, what) for what in (SOURCE, BOOSTER)[: 1 + boosted]]
+    noise: Field = np.concatenate(drawn, axis=1).astype(complex_type)
     noise.flags.writeable = False
     return noise
 

@@ -11,6 +11,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
+from scipy import fft
 
 from solver.experiment import Precision, Span
 from solver.fibre import sections
@@ -32,11 +33,19 @@ def scheme_for(tolerance: float) -> Scheme:
     return SECOND_ORDER if tolerance > 3e-4 else FOURTH_ORDER
 
 
-def light_of(field: Field) -> Light:
-    """The :class:`Light` of fields of shape (realizations, 2, samples), √W."""
-    power = np.sum(np.abs(field) ** 2, axis=1, dtype=np.float64)
+def _power(field: Field) -> Real:
+    return np.square(field.real, dtype=np.float64) + np.square(field.imag, dtype=np.float64)
+
+
+def light_of(field: Field, spectrum: Field | None = None) -> Light:
+    """The :class:`Light` of fields of shape (realizations, 2, samples), √W.
+
+    spectrum: their transform, where it is known.
+    """
+    spectrum = fft.fft(field) if spectrum is None else spectrum
+    power = np.sum(_power(field), axis=1)
     mean = max(float(power.mean()), np.finfo(float).tiny)
-    density = np.mean(np.abs(np.fft.fft(field)) ** 2, axis=(0, 1))
+    density = np.mean(_power(spectrum), axis=(0, 1))
     return Light(
         float((power**2).mean()) / mean, density / max(density.sum(), np.finfo(float).tiny)
     )
@@ -44,8 +53,9 @@ def light_of(field: Field) -> Light:
 
 def relative_error(field: Field, reference: Field) -> float:
     """Largest relative L2 distance of any realization from its reference."""
-    distance = np.sqrt(np.sum(np.abs(field - reference) ** 2, axis=(1, 2), dtype=np.float64))
-    size = np.sqrt(np.sum(np.abs(reference) ** 2, axis=(1, 2), dtype=np.float64))
+    distance, size = (
+        np.sqrt(np.sum(_power(each), axis=(1, 2))) for each in (field - reference, reference)
+    )
     return float(np.max(distance / np.maximum(size, np.finfo(float).tiny)))
 
 
@@ -160,9 +170,10 @@ def _propagate_batch(
     track: Track, field: Field, tolerance: float, precision: Precision, wanted: Sequence[float]
 ) -> Propagation:
     scheme = scheme_for(tolerance)
-    weights = track.weights(scheme, light_of(field))
-    limit = edge_limit(tolerance, precision)
     field = field.astype(COMPLEX[precision])
+    spectrum = fft.fft(field)
+    weights = track.weights(scheme, light_of(field, spectrum))
+    limit = edge_limit(tolerance, precision)
     spent = 0
 
     def finish(run: "_Run", error: float, outcome: Outcome) -> Propagation:
@@ -177,7 +188,7 @@ def _propagate_batch(
         spent += made.steps * scheme.transforms_per_step
         return made
 
-    share = edge_share(np.fft.fft(field), track.grid.samples // 2)
+    share = edge_share(spectrum, track.grid.samples // 2)
     if share > limit:
         untouched = _Run(field, None, 0, COMPLETED)
         return finish(

@@ -1,7 +1,8 @@
 """What a study has found, and the file that keeps it.
 
 The file is HDF5 and describes itself: the study as JSON in an attribute, axes with their units,
-and under ``variants/V`` every estimate as a pair ``value``, ``standard_error``, with one row for
+``surface`` with C12(0) over all that was varied, and under ``variants/V``, V counting the curves,
+every estimate as a pair ``value``, ``standard_error``, with one row for
 each point that has been computed: ``point`` says which ones. Rows of points whose ``outcome`` is
 not ``completed`` hold no numbers. Nothing is compressed: that would take longer than all else.
 """
@@ -11,176 +12,37 @@ import io
 import json
 import os
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 import h5py
 import numpy as np
 
-from solver.experiment import NUMERICS, Study, numeric_parameters
+from solver.budget import GridUse
+from solver.experiment import NUMERICS, Study, Sweep, title_and_unit
+from solver.findings import SCALE_UNITS, Invariants, LinearRegime, Picture, Scales
 from solver.grid import Real
 from solver.pairing import Difference
-from solver.statistics import CORRELATIONS, ESTIMATES, SPECTRA, Estimate, Layout
+from solver.point import PointResult
+from solver.statistics import ESTIMATES, ORDER, Estimate, Layout
+from solver.view import number, numbers
+
+__all__ = [
+    "Axes",
+    "PointResult",
+    "StudyResult",
+    "along_csv",
+    "curves_csv",
+    "read_result",
+    "write_result",
+]
 
 MAP_ROWS = 64
 """Distances of an evolution map, the launch not counted."""
 MAP_COLUMNS = 1024
-FORMAT = "crossdip result 2"
-
-
-@dataclass(frozen=True)
-class Picture:
-    """Evolution map of one realization, as 8-bit levels.
-
-    data: uint8, shape (3, rows, columns): contrast from −1 (0) to 1 (255), then the power of
-    components 1 and 2 in the fibre, in steps of intensity_scale_w.
-    """
-
-    data: np.ndarray
-    intensity_scale_w: float
-
-
-@dataclass(frozen=True)
-class LinearRegime:
-    """Closed forms with the Kerr term off, on the signed lag axis.
-
-    launched: C12(0) at the launch.
-    """
-
-    auto1: Real
-    auto2: Real
-    sum: Real
-    cross: Real
-    moment_cross: float
-    launched: float
-
-
-@dataclass(frozen=True)
-class PointResult:
-    """Every estimate of one point of one curve, so far or for good.
-
-    steps: of the line; samples: of the window at its end; transforms: of batches, trials included.
-    difference: from the first variant at the same value of the sweep, common realizations only.
-    estimates holds :data:`solver.statistics.ESTIMATES` by name; it is empty where the outcome
-    is not ``completed``.
-    """
-
-    variant: int
-    point: int
-    realizations: int
-    target_met: bool
-    final: bool
-    outcome: str = "completed"
-    advice: str = ""
-    discretization_error: float = 0.0
-    steps: int = 0
-    transforms: int = 0
-    samples: int = 0
-    length_km: float = 0.0
-    estimates: Mapping[str, Estimate] = field(default_factory=dict)
-    linear: LinearRegime | None = None
-    difference: Difference | None = None
-    picture: Picture | None = None
-
-    @property
-    def central(self) -> tuple[float, float] | None:
-        """C12(0) at the end of the line and its standard error, where there is one."""
-        if not self.estimates:
-            return None
-        value, error = self.estimates["distance"]
-        return float(value[-1]), float(error[-1])
-
-    def summary(self) -> dict[str, Any]:
-        """What the curve needs of the point; JSON-able."""
-        central = self.central
-        linear = self.linear
-        return {
-            "variant": self.variant,
-            "point": self.point,
-            "value": central and _number(central[0]),
-            "standard_error": central and _number(central[1]),
-            "discretization_error": central and _number(self.discretization_error),
-            "linear": linear and _number(linear.cross[len(linear.cross) // 2]),
-            "difference": self._difference(),
-            "along": central and _pair(self.estimates["distance"]),
-            "realizations": self.realizations,
-            "target_met": self.target_met,
-            "outcome": self.outcome,
-            "advice": self.advice,
-            "final": self.final,
-            "has_map": self.picture is not None,
-            "length_km": self.length_km,
-        }
-
-    def _difference(self) -> dict[str, float | None] | None:
-        if self.difference is None:
-            return None
-        return {name: _number(value) for name, value in vars(self.difference).items()}
-
-    def detail(self) -> dict[str, Any]:
-        """Everything but the map; JSON-able."""
-        found = self.estimates
-        if not found:
-            return {"summary": self.summary()}
-        powers = [_number(x) for x in found["powers"].value]
-        names = ("launched_1_w", "launched_2_w", "received_1_w", "received_2_w")
-        correlations = {name: _pair(found[name]) for name in CORRELATIONS}
-        if self.linear is not None:
-            for name, curve in correlations.items():
-                curve["linear"] = _numbers(getattr(self.linear, name))
-        return {
-            "summary": self.summary(),
-            "distance": _pair(found["distance"]),
-            "correlations": correlations,
-            "moment_cross": _single(found["moment_cross"]),
-            "spectra": {name: _pair(found[name]) for name in SPECTRA},
-            "contrast": _density(found["contrast"]),
-            "durations": _density(found["durations"]),
-            "walls_per_ns": _single(found["walls_per_ns"]),
-            "mean_duration_ps": _single(found["mean_duration_ps"]),
-            "energy": dict(zip(names, powers, strict=True)),
-            "steps": self.steps,
-            "transforms": self.transforms,
-            "samples": self.samples,
-        }
-
-
-def _numbers(values: Real) -> list[float | None]:
-    """Floats that JSON can carry, to 7 significant digits; None where not finite."""
-    finite = np.isfinite(values)
-    plain = np.where(finite, values, 0.0)
-    size = np.abs(plain)
-    # Dividing by a power of ten, or multiplying, whichever is a whole number: both print short.
-    digits = 6 - np.floor(np.log10(np.where(size > 0.0, size, 1.0)))
-    up, down = 10.0 ** np.maximum(digits, 0.0), 10.0 ** np.maximum(-digits, 0.0)
-    short = np.rint(plain * up / down) * down / up
-    return [x if ok else None for x, ok in zip(short.tolist(), finite.tolist(), strict=True)]
-
-
-def _number(value: float) -> float | None:
-    return _numbers(np.array([value]))[0]
-
-
-def _pair(estimate: Estimate) -> dict[str, list[float | None]]:
-    return {
-        "value": _numbers(estimate.value),
-        "standard_error": _numbers(estimate.standard_error),
-    }
-
-
-def _density(estimate: Estimate) -> dict[str, list[float | None]]:
-    return {
-        "density": _numbers(estimate.value),
-        "standard_error": _numbers(estimate.standard_error),
-    }
-
-
-def _single(estimate: Estimate) -> dict[str, float | None]:
-    return {
-        "value": _number(estimate.value[0]),
-        "standard_error": _number(estimate.standard_error[0]),
-    }
+FORMAT = "crossdip result 3"
+READABLE = {FORMAT, "crossdip result 2"}
 
 
 @dataclass(frozen=True)
@@ -195,7 +57,8 @@ class Axes:
 
     def named(self) -> dict[str, tuple[Real, str]]:
         """Axis values and unit, by name."""
-        layout = Layout.of(self.study.experiment.ensemble)
+        experiment = self.study.experiment
+        layout = Layout.of(experiment.ensemble, experiment.receiver)
         ensemble = self.study.experiment.ensemble
         length = self.study.experiment.length_km
         columns = min(MAP_COLUMNS, ensemble.samples)
@@ -205,34 +68,49 @@ class Axes:
             "offset_ghz": (layout.offset_ghz, "GHz"),
             "contrast": (layout.contrast, "1"),
             "duration_ps": (layout.duration_ps, "ps"),
+            "sphere_s3": (layout.sphere_s3, "1"),
+            "sphere_azimuth_deg": (layout.sphere_azimuth_deg, "°"),
+            "relative_intensity": (layout.relative_intensity, "1"),
+            "quadrature": (layout.quadrature, "1"),
             "map_distance_km": (np.linspace(0.0, length, MAP_ROWS + 1), "km"),
             "map_time_ps": ((np.arange(columns) + 0.5) * ensemble.window_ps / columns, "ps"),
         }
 
     def sweep(self) -> dict[str, Any]:
         """The swept parameter: path, title, unit and values; JSON-able."""
-        sweep = self.study.sweep
-        title, unit = next((t, u) for p, t, u in numeric_parameters() if p == sweep.parameter)
-        return {
-            "parameter": sweep.parameter,
-            "title": title,
-            "unit": unit,
-            "values": sweep.values(),
-        }
+        return _swept(self.study.sweep)
+
+    def second(self) -> dict[str, Any] | None:
+        """The parameter of the second sweep, where there is one; JSON-able."""
+        return None if self.study.second is None else _swept(self.study.second)
 
     def to_json(self) -> dict[str, Any]:
         """All axes; JSON-able."""
-        axes: dict[str, Any] = {name: _numbers(v) for name, (v, _) in self.named().items()}
+        axes: dict[str, Any] = {name: numbers(v) for name, (v, _) in self.named().items()}
         axes["map"] = {
             "distance_km": axes.pop("map_distance_km"),
             "time_ps": axes.pop("map_time_ps"),
         }
-        return {"sweep": self.sweep(), **axes}
+        return {"sweep": self.sweep(), "second": self.second(), **axes}
+
+
+def _swept(sweep: Sweep) -> dict[str, Any]:
+    title, unit = title_and_unit(sweep.parameter)
+    return {
+        "parameter": sweep.parameter,
+        "title": title,
+        "unit": unit,
+        "values": sweep.values(),
+    }
 
 
 @dataclass(frozen=True)
 class StudyResult:
-    """A study and what has been found of each point, points[variant][point]."""
+    """A study and what has been found of each point, points[curve][point].
+
+    Curves are those of :attr:`solver.experiment.Study.curves`: the variants, where there is no
+    second axis.
+    """
 
     study: Study
     points: list[list[PointResult | None]]
@@ -246,6 +124,20 @@ class StudyResult:
         """The points that have something."""
         for row in self.points:
             yield from (point for point in row if point is not None)
+
+    def surface(self) -> Estimate:
+        """C12(0) over everything that was varied, nan where nothing has been found.
+
+        Shape (variants, values of the second axis or 1, points of the sweep, distances).
+        """
+        study = self.study
+        distances = study.experiment.ensemble.distances + 1
+        found = np.full((2, len(study.curves), study.sweep.points, distances), np.nan)
+        for point in self.found():
+            if point.estimates:
+                found[:, point.variant, point.point] = point.estimates["distance"]
+        shape = (2, len(study.variants), study.seconds, study.sweep.points, distances)
+        return Estimate(*found.reshape(shape))
 
 
 def write_result(path: Path, result: StudyResult, *, title: str, created: str) -> None:
@@ -279,12 +171,16 @@ def _fill(file: h5py.File, result: StudyResult, title: str, created: str) -> Non
     axes = file.create_group("axes")
     for name, (values, unit) in result.axes.named().items():
         axes.create_dataset(name, data=values).attrs["unit"] = unit
-    sweep = result.axes.sweep()
-    made = axes.create_dataset("sweep", data=sweep["values"])
-    made.attrs.update({name: sweep[name] for name in ("parameter", "title", "unit")})
-    for index, variant in enumerate(study.variants):
+    for name, swept in (("sweep", result.axes.sweep()), ("second", result.axes.second())):
+        if swept is not None:
+            made = axes.create_dataset(name, data=swept["values"])
+            made.attrs.update({name: swept[name] for name in ("parameter", "title", "unit")})
+    for name, values in result.surface()._asdict().items():
+        made = file.create_dataset(f"surface/{name}", data=values)
+        made.attrs.update({"unit": "1", "axes": "variant, second, sweep, distance_km"})
+    for index, curve in enumerate(study.curves):
         group = file.create_group(f"variants/{index}")
-        group.attrs.update({"name": variant.name, "changes": json.dumps(variant.changes)})
+        group.attrs.update({"name": curve.name, "changes": json.dumps(curve.changes)})
         _fill_variant(group, [point for point in result.points[index] if point is not None])
 
 
@@ -304,8 +200,8 @@ _SCALARS = (
 
 
 _LEVELS = (
-    "layer 0: contrast = level/127.5 - 1; layers 1, 2: power of component 1, 2 in W = "
-    "level * intensity_scale_w"
+    "layer 0: contrast S1/S0 = level/127.5 - 1; layers 1, 2: power of component 1, 2 in W = "
+    "level * intensity_scale_w; layers 3, 4: S2/S0, S3/S0 = level/127.5 - 1"
 )
 
 
@@ -317,10 +213,13 @@ def _quantities(point: PointResult) -> Iterator[tuple[str, Any, str]]:
     for name, found in (
         ("linear_regime", point.linear),
         ("difference_from_first", point.difference),
+        ("invariants", point.invariants),
+        ("scales", point.scales),
+        ("grid_use", point.use),
     ):
-        if found is not None:
-            for part, values in vars(found).items():
-                yield f"{name}/{part}", values, "1"
+        for part, values in vars(found).items() if found is not None else ():
+            if not isinstance(values, str):
+                yield f"{name}/{part}", values, SCALE_UNITS.get(part, "1")
     if point.picture is not None:
         yield "intensity_scale_w", point.picture.intensity_scale_w, "W"
 
@@ -328,6 +227,8 @@ def _quantities(point: PointResult) -> Iterator[tuple[str, Any, str]]:
 def _fill_variant(group: h5py.Group, points: Sequence[PointResult]) -> None:
     for name in _SCALARS:
         group.create_dataset(name, data=_column([getattr(point, name) for point in points]))
+    notes = [point.invariants.note if point.invariants else "" for point in points]
+    group.create_dataset("invariants_note", data=_column(notes))
     units: dict[str, str] = {}
     stacked: dict[str, Real] = {}
     for row, point in enumerate(points):
@@ -337,7 +238,10 @@ def _fill_variant(group: h5py.Group, points: Sequence[PointResult]) -> None:
                 stacked[name] = np.full((len(points), *np.shape(values)), np.nan)
             stacked[name][row] = values
     for name, rows in stacked.items():
-        group.create_dataset(name, data=rows).attrs["unit"] = units[name]
+        made = group.create_dataset(name, data=rows)
+        made.attrs["unit"] = units[name]
+        if order := ORDER.get(name.partition("/")[0]):
+            made.attrs["order"] = order
     shown = {row: point.picture for row, point in enumerate(points) if point.picture is not None}
     if shown:
         shape = next(iter(shown.values())).data.shape
@@ -360,11 +264,11 @@ def read_result(path: Path) -> StudyResult:
     Raises OSError when it cannot be read, ValueError when it is not a result of this format.
     """
     with h5py.File(path, "r") as file:
-        if file.attrs.get("format") != FORMAT:
+        if file.attrs.get("format") not in READABLE:
             raise ValueError(f"{path.name} is not a result file of format {FORMAT!r}")
         study = Study.model_validate_json(str(file.attrs["study"]))
         points: list[list[PointResult | None]] = []
-        for index in range(len(study.variants)):
+        for index in range(len(study.curves)):
             group = file[f"variants/{index}"]
             row: list[PointResult | None] = [None] * study.sweep.points
             for found in _read_variant(index, group):
@@ -394,12 +298,20 @@ def _read_point(variant: int, stored: Mapping[str, Any]) -> PointResult:
             for name in ESTIMATES
             if f"{name}/value" in stored
         }
-    linear = picture = difference = None
+    linear = picture = difference = use = invariants = scales = None
     if _found(stored, "linear_regime/moment_cross"):
         linear = LinearRegime(**_under(stored, "linear_regime"))
     if _found(stored, "difference_from_first/realizations"):
         parts = _under(stored, "difference_from_first")
         difference = Difference(**{**parts, "realizations": round(parts["realizations"])})
+    if _found(stored, "scales/coherence_time_ps"):
+        scales = Scales(**_under(stored, "scales"))
+        note = _plain(stored["invariants_note"])
+        invariants = Invariants(**_under(stored, "invariants"), note=note)
+    if _found(stored, "grid_use/target"):
+        parts = _under(stored, "grid_use")
+        whole = {name: round(parts[name]) for name in ("samples_asked", "most")}
+        use = GridUse(**{**parts, **whole})
     if _found(stored, "intensity_scale_w"):
         picture = Picture(stored["map"], _plain(stored["intensity_scale_w"]))
     return PointResult(
@@ -408,7 +320,10 @@ def _read_point(variant: int, stored: Mapping[str, Any]) -> PointResult:
         estimates=estimates,
         linear=linear,
         difference=difference,
+        use=use,
         picture=picture,
+        invariants=invariants,
+        scales=scales,
     )
 
 
@@ -429,40 +344,75 @@ def _plain(value: Any) -> Any:
 
 
 def curves_csv(result: StudyResult) -> str:
-    """C12(0) against the swept parameter, one line for each point of each variant."""
-    sweep = result.axes.sweep()
-    out = io.StringIO()
-    writer = csv.writer(out, lineterminator="\n")
-    swept = f"{sweep['parameter']} [{sweep['unit'] or '1'}]"
-    writer.writerow(
-        [
-            "variant",
-            swept,
-            "central_cross_correlation",
-            "standard_error",
-            "discretization_error",
-            "linear_regime",
-            "realizations",
-            "target_met",
-            "outcome",
-            "difference_from_first",
-            "difference_standard_error",
-        ]
-    )
-    for point in result.found():
-        row = point.summary()
-        writer.writerow(
-            [
-                result.study.variants[point.variant].name,
-                sweep["values"][point.point],
+    """C12(0) against the swept parameter, one line for each point of each curve."""
+    heads = [
+        "central_cross_correlation",
+        "standard_error",
+        "discretization_error",
+        "linear_regime",
+        "realizations",
+        "target_met",
+        "outcome",
+        "limited_by",
+        "difference_from_first",
+        "difference_standard_error",
+    ]
+
+    def rows() -> Iterator[list[Any]]:
+        for point in result.found():
+            row = point.summary()
+            yield [
+                *_place(result, point),
                 *_cells(row, "value", "standard_error", "discretization_error", "linear"),
                 row["realizations"],
                 "yes" if row["target_met"] else "no",
                 row["outcome"],
+                row["limited_by"],
                 *_cells(row["difference"] or {}, "value", "standard_error"),
             ]
-        )
+
+    return _table([*_place_heads(result), *heads], rows())
+
+
+def along_csv(result: StudyResult) -> str:
+    """C12(0) over swept parameters and distance, one line for each distance of each point."""
+    heads = ["distance [km]", "central_cross_correlation", "standard_error"]
+    parts = np.linspace(0.0, 1.0, result.study.experiment.ensemble.distances + 1)
+
+    def rows() -> Iterator[list[Any]]:
+        for point in result.found():
+            if not point.estimates:
+                continue
+            here = point.estimates["distance"]
+            for share, value, error in zip(
+                parts, numbers(here.value), numbers(here.standard_error), strict=True
+            ):
+                z_km = number(share * point.length_km)
+                pair = {"value": value, "standard_error": error}
+                yield [*_place(result, point), z_km, *_cells(pair, "value", "standard_error")]
+
+    return _table([*_place_heads(result), *heads], rows())
+
+
+def _table(heads: Sequence[str], rows: Iterator[list[Any]]) -> str:
+    out = io.StringIO()
+    writer = csv.writer(out, lineterminator="\n")
+    writer.writerow(heads)
+    writer.writerows(rows)
     return out.getvalue()
+
+
+def _place_heads(result: StudyResult) -> list[str]:
+    axes = [result.axes.second(), result.axes.sweep()]
+    return ["variant", *(f"{a['parameter']} [{a['unit'] or '1'}]" for a in axes if a is not None)]
+
+
+def _place(result: StudyResult, point: PointResult) -> list[Any]:
+    """Variant and swept values of a point, for a table."""
+    study = result.study
+    variant, at = divmod(point.variant, study.seconds)
+    second = [] if study.second is None else [study.second.values()[at]]
+    return [study.variants[variant].name, *second, study.sweep.values()[point.point]]
 
 
 def _cells(row: Mapping[str, Any], *names: str) -> list[Any]:

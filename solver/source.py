@@ -9,6 +9,14 @@ from solver.grid import Complex, Field, Grid, Real
 
 def power_spectrum(source: Source, grid: Grid) -> Real:
     """Fraction of the source's power in each frequency bin, FFT order, summing to 1."""
+    if source.measured is not None:
+        measured = source.measured
+        # An optical frequency above the carrier is a negative baseband frequency.
+        heights = np.array(measured.density) / max(measured.density)
+        density = np.interp(
+            -1e3 * grid.frequency_thz, measured.offset_ghz, heights, left=0.0, right=0.0
+        )
+        return np.asarray(density / density.sum())
     x = 2e3 * grid.frequency_thz / source.width_ghz  # ±1 at half maximum
     match source.shape:
         case "gaussian":
@@ -22,7 +30,17 @@ def power_spectrum(source: Source, grid: Grid) -> Real:
     return np.asarray(density / density.sum())
 
 
-def draw(seed: int, realizations: range, grid: Grid) -> Complex:
+SOURCE, BOOSTER, PREAMPLIFIER, DIODES = range(4)
+"""What draws noise: the streams of one realization are independent of each other."""
+
+
+def stream(seed: int, realization: int, what: int) -> np.random.Generator:
+    """The random numbers of one realization that are drawn for one purpose."""
+    key = (realization,) if what == SOURCE else (realization, what)
+    return np.random.default_rng(np.random.SeedSequence(seed, spawn_key=key))
+
+
+def draw(seed: int, realizations: range, grid: Grid, what: int = SOURCE) -> Complex:
     """White circular complex Gaussian noise of unit variance per frequency bin.
 
     Shape (realizations, 2 draws, samples), FFT order. Realization ``i`` of a seed is always
@@ -34,8 +52,7 @@ def draw(seed: int, realizations: range, grid: Grid) -> Complex:
     place = np.argsort(outwards)
     noise = np.empty((len(realizations), 2, samples), dtype=np.complex128)
     for row, index in zip(noise, realizations, strict=True):
-        stream = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(index,)))
-        values = stream.standard_normal((samples, 4)).view(np.complex128)
+        values = stream(seed, index, what).standard_normal((samples, 4)).view(np.complex128)
         np.take(values.T, place, axis=1, out=row)
     noise *= np.sqrt(0.5)
     return noise
@@ -44,7 +61,7 @@ def draw(seed: int, realizations: range, grid: Grid) -> Complex:
 def synthesize(noise: Field, response: Field) -> Field:
     """Fields in √W from white noise and the response of the whole input, in their precision.
 
-    noise has shape (realizations, 2 draws, samples), response (2 components, 2 draws, samples)
+    noise has shape (realizations, draws, samples), response (2 components, draws, samples)
     in √W; the result has shape (realizations, 2 components, samples).
     """
     spectrum = np.einsum("jdf,rdf->rjf", response, noise)

@@ -1,34 +1,60 @@
-"""Mergeable accumulators and their error bars.
-
-One realization is one independent sample. What is averaged linearly keeps sums and sums of
-squares; what enters a ratio or a product of averages keeps sums over blocks of realizations,
-for the jackknife. Both take constant memory however many realizations come, and give the same
-bits whenever the realizations are added in the same order.
-"""
+"""Every estimate of a point of a study, from its accumulators, with its standard error."""
 
 from collections.abc import Callable, Iterator, Mapping
-from dataclasses import dataclass
-from typing import NamedTuple
 
 import numpy as np
 
-from solver.experiment import Ensemble
-from solver.grid import Grid, Real
+from solver.accumulators import (
+    FEWEST_CONTROLLED,
+    MOST_BLOCKS,
+    Arrays,
+    Blocks,
+    Control,
+    Estimate,
+    Means,
+    sums_and_squares,
+)
+from solver.grid import Real
+from solver.layout import (
+    CONTRAST_BINS,
+    DURATION_BINS,
+    IDEAL,
+    INTENSITY_BINS,
+    SPHERE_BINS,
+    Layout,
+)
+from solver.widths import half_maximum_width
 
-Arrays = Mapping[str, np.ndarray]
-
-MOST_BLOCKS = 128
-"""Blocks kept for the jackknife; neighbours are merged in pairs when there would be more."""
-FEWEST_CONTROLLED = 8
-"""Blocks from which on a control is worth the degrees of freedom it costs."""
-CONTRAST_BINS = 50
-DURATION_BINS = 50
-MOST_LAGS = 400
-MOST_FREQUENCIES = 1024
-
+__all__ = [
+    "ALONG",
+    "CONTRAST_BINS",
+    "CORRELATIONS",
+    "DURATION_BINS",
+    "ESTIMATES",
+    "FEWEST_CONTROLLED",
+    "IDEAL",
+    "INTENSITIES",
+    "MOST_BLOCKS",
+    "ORDER",
+    "SPECTRA",
+    "TINY",
+    "Arrays",
+    "Blocks",
+    "Control",
+    "Estimate",
+    "Estimators",
+    "Layout",
+    "Means",
+    "central",
+    "last_central",
+    "launch_control",
+    "sums_and_squares",
+]
 
 CORRELATIONS = ("auto1", "auto2", "sum", "cross")
 SPECTRA = ("input1", "input2", "output1", "output2")
+ALONG = ("power1", "power2", "second_moment1", "second_moment2")
+INTENSITIES = ("intensity1", "intensity2", "intensity_sum")
 ESTIMATES: dict[str, str] = {
     "distance": "1",
     **dict.fromkeys(CORRELATIONS, "1"),
@@ -39,213 +65,70 @@ ESTIMATES: dict[str, str] = {
     "walls_per_ns": "1/ns",
     "mean_duration_ps": "ps",
     "powers": "W",
+    "power1": "W",
+    "power2": "W",
+    "second_moment1": "1",
+    "second_moment2": "1",
+    "walls_along": "1/ns",
+    "duration_along": "ps",
+    "wall_width_ps": "ps",
+    "contrast_correlation": "1",
+    "stokes": "1/sr",
+    "stokes_means": "1",
+    "polarization_degree": "1",
+    "local_polarization_degree": "1",
+    **dict.fromkeys(INTENSITIES, "1"),
+    "quadratures": "1",
+    "spectral_rms_ghz": "GHz",
+    "spectral_fwhm_ghz": "GHz",
+    "coherence_time_ps": "ps",
 }
 """Names of all estimates and their units.
 
 distance: C12(0) at each recorded distance; auto1, auto2, sum, cross: normalized intensity
 covariances against signed lag; moment_cross: ⟨I1 I2⟩/(⟨I1⟩⟨I2⟩) at lag 0; input and output
 spectra; contrast, durations: probability densities; powers: launched 1, 2, arriving 1, 2.
+
+Against distance: power1, power2; second_moment1, second_moment2: ⟨I²⟩/⟨I⟩²; walls_along,
+duration_along: walls per ns and mean time between them, counted on the grid that the light is
+on there, so that a coarse one misses walls close together.
+
+At the end of the line: wall_width_ps: mean of 2/|dC/dt| over the walls, none of them
+taken to be wider than the longest duration kept; contrast_correlation:
+normalized autocovariance of the contrast against signed lag; stokes: density on the Poincaré
+sphere, shape (bins of S3/S0, bins of azimuth), every moment weighing alike (weighing by power
+instead would favour bright moments); stokes_means: ⟨S1⟩, ⟨S2⟩, ⟨S3⟩ over ⟨S0⟩, and
+polarization_degree: their length, each first of the launch and then at the demultiplexer;
+what chance alone adds to its square is taken off;
+local_polarization_degree: mean of the same over running means as long as the wall smoothing;
+intensity1, intensity2, intensity_sum: densities over the mean; quadratures: density of real
+and imaginary parts of both fields over their expected standard deviation.
+
+Of the four spectra in turn: spectral_rms_ghz and spectral_fwhm_ghz as an analyser shows them,
+coherence_time_ps: τc = ∫S²df/(∫S df)² (Goodman, Statistical Optics, ch. 5) of the light itself.
 """
+ORDER = {
+    "distance": "distance_km",
+    **dict.fromkeys((*ALONG, "walls_along", "duration_along"), "distance_km"),
+    **dict.fromkeys((*CORRELATIONS, "contrast_correlation"), "lag_ps"),
+    **dict.fromkeys(SPECTRA, "offset_ghz"),
+    "contrast": "contrast",
+    "durations": "duration_ps",
+    **dict.fromkeys(INTENSITIES, "relative_intensity"),
+    "quadratures": "quadrature",
+    "stokes": "sphere_s3, sphere_azimuth_deg",
+    "powers": "launched 1, launched 2, arriving 1, arriving 2",
+    "stokes_means": "launched, received; S1/S0, S2/S0, S3/S0",
+    "polarization_degree": "launched, received",
+    **dict.fromkeys(
+        ("spectral_rms_ghz", "spectral_fwhm_ghz", "coherence_time_ps"), ", ".join(SPECTRA)
+    ),
+}
+"""Axis or order of the values of every estimate that has more than one."""
 TINY = float(np.finfo(np.float64).tiny)
 """Stands for zero under a division whose numerator is zero too."""
-
-
-class Estimate(NamedTuple):
-    """Values and their standard errors, arrays of one shape."""
-
-    value: Real
-    standard_error: Real
-
-
-@dataclass(frozen=True)
-class Control:
-    """Quantities whose expectation is known: a function of the feature means, shape (..., n),
-    and what it tends to, shape (n,)."""
-
-    function: Callable[[Real], Real]
-    expected: Real
-
-
-class Blocks:
-    """Sums of feature vectors over blocks of consecutive realizations."""
-
-    def __init__(self, features: int) -> None:
-        self.sums = np.zeros((0, features))
-        self.counts = np.zeros(0, dtype=np.int64)
-        self.capacity = 1
-
-    @property
-    def realizations(self) -> int:
-        """Realizations added so far."""
-        return int(self.counts.sum())
-
-    def add(self, rows: Real) -> None:
-        """Add the features of further realizations, shape (realizations, features), in order."""
-        for row in rows:
-            if len(self.counts) and self.counts[-1] < self.capacity:
-                self.sums[-1] += row
-                self.counts[-1] += 1
-                continue
-            if len(self.counts) == MOST_BLOCKS:
-                self.sums = self.sums[0::2] + self.sums[1::2]
-                self.counts = self.counts[0::2] + self.counts[1::2]
-                self.capacity *= 2
-            self.sums = np.concatenate([self.sums, row[None]])
-            self.counts = np.append(self.counts, 1)
-
-    def estimate(
-        self, function: Callable[[Real], Real], control: "Control | None" = None
-    ) -> Estimate:
-        """A function of the feature means and its standard error.
-
-        ``function`` maps means of shape (..., features) to values of shape (..., n). The error
-        is the delete-a-group jackknife for groups of unequal size (Busing, Meijer and
-        van der Leeden, Statistics and Computing 9, 3, 1999, eqs 5 and 6); nan below two blocks.
-
-        With a control, what chance did to quantities whose expectation is known is taken out of
-        the values: the regression on control variates (Lavenberg and Welch, Management Science
-        27, 322, 1981), done on the pseudo-values. The jackknife then leaves groups out of the
-        regression too, by their leverages (Miller, Ann. Statist. 2, 880, 1974).
-        """
-        total, n = self.sums.sum(axis=0), self.counts.sum()
-        value = function(total / n)
-        groups = len(self.counts)
-        if groups < 2:
-            return Estimate(value, np.full_like(value, np.nan))
-        left_out = (total - self.sums) / (n - self.counts)[:, None]
-        deviations = self._deviations(value, function(left_out))
-        if control is not None and groups >= FEWEST_CONTROLLED:
-            known = control.function(total / n)
-            regressors = self._deviations(known, control.function(left_out))
-            # Controls that chance leaves alone, or that go together, have no say of their own.
-            inverse = np.linalg.pinv(regressors.T @ regressors, rcond=1e-9, hermitian=True)
-            factors = inverse @ regressors.T @ deviations
-            missed = control.expected - known
-            value = value + missed @ factors
-            leverage = np.sum(regressors @ inverse * regressors, axis=1)
-            reach = regressors @ inverse @ missed * groups / np.sqrt(groups - 1)
-            weight = (1.0 + reach) / np.maximum(1.0 - leverage * groups / (groups - 1), 1e-3)
-            deviations = (deviations - regressors @ factors) * weight[:, None]
-        return Estimate(value, np.sqrt(np.mean(deviations**2, axis=0)))
-
-    def _deviations(self, value: Real, left_out: Real) -> Real:
-        """Pseudo-values less their centre, scaled so that their mean square is the variance."""
-        h = (self.counts.sum() / self.counts)[:, None]
-        pseudo = h * value - (h - 1.0) * left_out
-        centre = len(h) * value - np.sum((1.0 - 1.0 / h) * left_out, axis=0)
-        return np.asarray((pseudo - centre) / np.sqrt(h - 1.0))
-
-    def arrays(self) -> dict[str, np.ndarray]:
-        """Everything needed to go on later; copies, which later realizations do not change."""
-        capacity = np.array(self.capacity)
-        return {"sums": self.sums.copy(), "counts": self.counts.copy(), "capacity": capacity}
-
-    @classmethod
-    def from_arrays(cls, arrays: Arrays) -> "Blocks":
-        """Inverse of :meth:`arrays`."""
-        made = cls(arrays["sums"].shape[1])
-        made.sums, made.counts = np.array(arrays["sums"]), np.array(arrays["counts"])
-        made.capacity = int(arrays["capacity"])
-        return made
-
-
-class Means:
-    """Count, sum and sum of squares of feature vectors that are averaged linearly."""
-
-    def __init__(self, features: int) -> None:
-        self.count = 0
-        self.sums = np.zeros((2, features))
-
-    def add(self, count: int, sums: Real) -> None:
-        """Add the sums and sums of squares, shape (2, features), of ``count`` realizations."""
-        self.count += count
-        self.sums += sums
-
-    def estimate(self) -> Estimate:
-        """Means and their standard errors; nan below two realizations."""
-        mean = self.sums[0] / self.count
-        if self.count < 2:
-            return Estimate(mean, np.full_like(mean, np.nan))
-        variance = np.maximum(self.sums[1] / self.count - mean**2, 0.0)
-        return Estimate(mean, np.sqrt(variance / (self.count - 1)))
-
-    def arrays(self) -> dict[str, np.ndarray]:
-        """Everything needed to go on later; copies, which later realizations do not change."""
-        return {"count": np.array(self.count), "sums": self.sums.copy()}
-
-    @classmethod
-    def from_arrays(cls, arrays: Arrays) -> "Means":
-        """Inverse of :meth:`arrays`."""
-        made = cls(arrays["sums"].shape[1])
-        made.add(int(arrays["count"]), arrays["sums"])
-        return made
-
-
-def sums_and_squares(rows: Real) -> Real:
-    """Sums and sums of squares over realizations, for :meth:`Means.add`."""
-    return np.stack([rows.sum(axis=0), (rows**2).sum(axis=0)])
-
-
-@dataclass(frozen=True)
-class Layout:
-    """Axes of the estimators of an experiment, and where each stands in the feature vectors.
-
-    The axes belong to the grid that was asked for; a point computed on a finer time step of
-    the same window reports on the same axes.
-    """
-
-    grid: Grid
-    distances: int
-    lag_stride: int
-    lags: int
-    frequency_bins: int
-    wall_smoothing_ps: float
-    longest_duration_ps: float
-
-    @classmethod
-    def of(cls, ensemble: Ensemble) -> "Layout":
-        """The layout that an ensemble's grid and lag range ask for."""
-        steps = max(1, round(ensemble.max_lag_ps / ensemble.time_step_ps))
-        stride = -(-steps // MOST_LAGS)
-        return cls(
-            grid=Grid(ensemble.samples, ensemble.time_step_ps),
-            distances=ensemble.distances + 1,
-            lag_stride=stride,
-            lags=steps // stride,
-            frequency_bins=min(MOST_FREQUENCIES, ensemble.samples),
-            wall_smoothing_ps=ensemble.wall_smoothing_ps,
-            longest_duration_ps=ensemble.max_lag_ps,
-        )
-
-    @property
-    def lag_ps(self) -> Real:
-        """Signed lags, ps; shape (2·lags + 1,)."""
-        return np.arange(-self.lags, self.lags + 1) * self.lag_stride * self.grid.time_step_ps
-
-    @property
-    def offset_ghz(self) -> Real:
-        """Centres of the frequency bins, optical offset from the carrier, GHz."""
-        return np.asarray(self.grid.offset_ghz.reshape(self.frequency_bins, -1).mean(axis=1))
-
-    @property
-    def contrast(self) -> Real:
-        """Centres of the contrast bins."""
-        return (np.arange(CONTRAST_BINS) + 0.5) * 2.0 / CONTRAST_BINS - 1.0
-
-    @property
-    def duration_ps(self) -> Real:
-        """Centres of the duration bins, ps."""
-        return (np.arange(DURATION_BINS) + 0.5) * self.longest_duration_ps / DURATION_BINS
-
-    @property
-    def block_features(self) -> int:
-        """Length of a realization's vector in :class:`Blocks`."""
-        return 5 * self.distances + 4 * self.lags + 3 + 1 + DURATION_BINS
-
-    @property
-    def mean_features(self) -> int:
-        """Length of a realization's vector in :class:`Means`."""
-        return 4 + CONTRAST_BINS + 4 * self.frequency_bins
+SCARCE = 1e-60
+"""Stands for no walls under a division whose quotient is not used then."""
 
 
 def central(means: Real) -> Real:
@@ -285,7 +168,7 @@ class Estimators(Mapping[str, Estimate]):
         self._blocks = Blocks.from_arrays(blocks.arrays())
         self._linear = means.estimate()
         self._known: dict[str, Estimate] = {}
-        self._walls_at = layout.block_features - DURATION_BINS - 1
+        self._at = layout.in_blocks
 
     def __iter__(self) -> Iterator[str]:
         return iter(ESTIMATES)
@@ -304,36 +187,64 @@ class Estimators(Mapping[str, Estimate]):
         return self._known[name]
 
     def _work_out(self, name: str) -> Estimate:
+        if name in SPECTRA:
+            return self._part("spectra", SPECTRA.index(name), self.layout.frequency_bins)
+        if name in INTENSITIES:
+            return self._part("intensities", INTENSITIES.index(name), INTENSITY_BINS)
+        if name in ALONG:
+            return self._ratio(lambda means: self._along(means)[ALONG.index(name)])
         match name:
             case "distance":
                 return self._blocks.estimate(
                     lambda means: central(self._moments(means)), launch_control(self._launched)
                 )
-            case "moment_cross":
-                return self._blocks.estimate(self._moment_cross)
-            case "walls_per_ns":
-                window_ns = self.layout.grid.window_ps / 1e3
-                at = self._walls_at
-                return self._blocks.estimate(lambda means: means[..., at : at + 1] / window_ns)
-            case "mean_duration_ps":
-                return self._mean_duration()
-            case "durations":
-                return self._blocks.estimate(self._durations)
-            case "powers":
-                return self._slice(0, 4)
-            case "contrast":
-                return self._slice(4, CONTRAST_BINS)
+            case "powers" | "contrast" | "quadratures":
+                return self._part(name)
+            case "stokes":
+                value, error = self._part(name)
+                return Estimate(value.reshape(SPHERE_BINS), error.reshape(SPHERE_BINS))
+            case "stokes_means":
+                value, error = self._ratio(self._stokes)
+                return Estimate(value.reshape(2, 3), error.reshape(2, 3))
+            case "walls_per_ns" | "mean_duration_ps":
+                return self._rate("walls", per_ns=name == "walls_per_ns")
+            case "walls_along" | "duration_along":
+                return self._rate("walls_along", per_ns=name == "walls_along")
+            case "wall_width_ps":
+                return self._wall_width()
+            case "polarization_degree":
+                return self._polarization_degree()
+            case "spectral_fwhm_ghz":
+                return self._half_maximum_widths()
             case _:
-                bins = self.layout.frequency_bins
-                return self._slice(4 + CONTRAST_BINS + SPECTRA.index(name) * bins, bins)
+                return self._ratio(
+                    {
+                        "moment_cross": self._moment_cross,
+                        "durations": self._durations,
+                        "contrast_correlation": self._contrast_correlation,
+                        "local_polarization_degree": self._local_polarization,
+                        "spectral_rms_ghz": self._rms_widths,
+                        "coherence_time_ps": self._coherence_times,
+                    }[name]
+                )
 
-    def _slice(self, start: int, length: int) -> Estimate:
+    def _ratio(self, function: Callable[[Real], Real]) -> Estimate:
+        return self._blocks.estimate(function)
+
+    def _part(self, name: str, index: int = 0, length: int | None = None) -> Estimate:
+        place = self.layout.in_means[name]
+        if length is not None:
+            place = slice(place.start + index * length, place.start + (index + 1) * length)
         value, error = self._linear
-        return Estimate(value[start : start + length], error[start : start + length])
+        return Estimate(value[place], error[place])
 
     def _moments(self, means: Real) -> Real:
-        d = self.layout.distances
-        return means[..., : 5 * d].reshape(*means.shape[:-1], d, 5)
+        return means[..., self._at["moments"]].reshape(*means.shape[:-1], self.layout.distances, 5)
+
+    def _along(self, means: Real) -> list[Real]:
+        """The quantities of ``ALONG``."""
+        m1, m2, m11, m22, _ = np.moveaxis(self._moments(means), -1, 0)
+        return [m1, m2, m11 / np.maximum(m1**2, TINY), m22 / np.maximum(m2**2, TINY)]
 
     def _moment_cross(self, means: Real) -> Real:
         last = self._moments(means)[..., -1, :]
@@ -342,16 +253,14 @@ class Estimators(Mapping[str, Estimate]):
 
     def _correlations(self) -> dict[str, Estimate]:
         n = self.layout.lags
-        start = 5 * self.layout.distances
 
         def curves(means: Real) -> Real:
             last = self._moments(means)[..., -1, :]
             m1, m2 = last[..., 0:1], last[..., 1:2]
-            raw = means[..., start : start + 4 * n + 3]
+            raw = means[..., self._at["correlations"]]
             half1, half2 = raw[..., : n + 1] - m1**2, raw[..., n + 1 : 2 * n + 2] - m2**2
             cross = raw[..., 2 * n + 2 :] - m1 * m2
-            auto1 = np.concatenate([half1[..., :0:-1], half1], axis=-1)
-            auto2 = np.concatenate([half2[..., :0:-1], half2], axis=-1)
+            auto1, auto2 = _mirrored(half1), _mirrored(half2)
             total = auto1 + auto2 + cross + cross[..., ::-1]
             v1, v2 = np.maximum(half1[..., :1], TINY), np.maximum(half2[..., :1], TINY)
             v_total = np.maximum(total[..., n : n + 1], TINY)
@@ -361,13 +270,98 @@ class Estimators(Mapping[str, Estimate]):
         value, error = (np.split(array, 4) for array in self._blocks.estimate(curves))
         return {name: Estimate(v, e) for name, v, e in zip(CORRELATIONS, value, error, strict=True)}
 
-    def _mean_duration(self) -> Estimate:
-        at, window = self._walls_at, self.layout.grid.window_ps
-        if not self._blocks.sums[:, at].any():
-            return Estimate(np.array([np.inf]), np.array([np.nan]))
-        return self._blocks.estimate(lambda m: window / np.maximum(m[..., at : at + 1], TINY))
+    def _rate(self, name: str, *, per_ns: bool) -> Estimate:
+        """Walls per ns, or the mean time between them; infinite where there is none."""
+        at, window_ps = self._at[name], self.layout.grid.window_ps
+        if per_ns:
+            return self._ratio(lambda means: means[..., at] * (1e3 / window_ps))
+        seen = np.count_nonzero(self._blocks.sums[:, at], axis=0)
+        value, error = self._ratio(lambda means: window_ps / np.maximum(means[..., at], SCARCE))
+        return Estimate(np.where(seen > 0, value, np.inf), np.where(seen > 1, error, np.nan))
 
     def _durations(self, means: Real) -> Real:
         width = self.layout.longest_duration_ps / DURATION_BINS
-        count = np.maximum(means[..., self._walls_at : self._walls_at + 1], TINY)
-        return np.asarray(means[..., self._walls_at + 1 :] / (count * width))
+        count = np.maximum(means[..., self._at["walls"]], TINY)
+        return np.asarray(means[..., self._at["durations"]] / (count * width))
+
+    def _wall_width(self) -> Estimate:
+        """Nothing where there is no wall."""
+        at, sums = self._at["walls"], self._at["wall_widths"]
+        seen = np.count_nonzero(self._blocks.sums[:, at])
+        value, error = self._ratio(
+            lambda means: means[..., sums] / np.maximum(means[..., at], TINY)
+        )
+        return Estimate(value if seen else value * np.nan, error if seen > 1 else error * np.nan)
+
+    def _contrast_correlation(self, means: Real) -> Real:
+        found = means[..., self._at["contrast"]]
+        half = found[..., 1:] - found[..., :1] ** 2
+        return np.asarray(_mirrored(half) / np.maximum(half[..., :1], TINY))
+
+    def _stokes(self, means: Real) -> Real:
+        found = means[..., self._at["stokes"]].reshape(*means.shape[:-1], 2, 4)
+        normalized = found[..., 1:] / np.maximum(found[..., :1], TINY)
+        return np.asarray(normalized.reshape(*means.shape[:-1], 6))
+
+    def _polarization_degree(self) -> Estimate:
+        """Length of the mean Stokes vector, what chance adds to its square taken off.
+
+        The square of a length estimated from parts s_i ± e_i exceeds that of the length by Σe_i²
+        on average, and has the variance (2·s·e)² + 2Σe_i⁴ for normal errors, s the length itself.
+        Its bars hold the truth in 65 to 71 % of all cases, near zero in 80 % (measured).
+        """
+
+        def parts_and_length(means: Real) -> Real:
+            stokes = self._stokes(means)
+            parts = stokes.reshape(*means.shape[:-1], 2, 3)
+            length = np.sqrt(np.sum(parts**2, axis=-1))
+            return np.concatenate([stokes, length], axis=-1)
+
+        value, error = self._ratio(parts_and_length)
+        length, chance = value[6:], np.sum(error[:6].reshape(2, 3) ** 2, axis=1)
+        if not np.isfinite(chance).all():
+            return Estimate(length, error[6:])
+        squared = np.maximum(length**2 - chance, 0.0)
+        fourth = 2.0 * np.sum(error[:6].reshape(2, 3) ** 4, axis=1)
+        degree = np.sqrt(squared)
+        spread = np.sqrt((2.0 * degree * error[6:]) ** 2 + fourth)
+        return Estimate(degree, spread / np.maximum(2.0 * degree, np.sqrt(spread) + TINY))
+
+    def _local_polarization(self, means: Real) -> Real:
+        return means[..., self._at["local_polarization"]]
+
+    def _lines(self, means: Real) -> list[Real]:
+        """Σp, Σfp, Σf²p and Σp_k p_{k+1} of the four spectra."""
+        return list(
+            np.moveaxis(means[..., self._at["lines"]].reshape(*means.shape[:-1], 4, 4), -1, 0)
+        )
+
+    def _rms_widths(self, means: Real) -> Real:
+        total, first, second, _ = self._lines(means)
+        total = np.maximum(total, TINY)
+        added = (self.layout.analyser_ghz or 0.0) ** 2 / (8.0 * np.log(2.0))
+        return np.asarray(np.sqrt(np.maximum(second / total - (first / total) ** 2, 0.0) + added))
+
+    def _coherence_times(self, means: Real) -> Real:
+        # Neighbouring lines of noise are independent, so their product has the mean S².
+        total, _, _, pairs = self._lines(means)
+        return np.asarray(self.layout.grid.window_ps * pairs / np.maximum(total**2, TINY))
+
+    def _half_maximum_widths(self) -> Estimate:
+        spacing_ghz = 1e3 / self.layout.grid.window_ps
+        spacing_ghz *= self.layout.grid.samples / self.layout.frequency_bins
+        found = [
+            half_maximum_width(
+                self[name],
+                spacing_ghz,
+                1e3 / time_ps if time_ps > 0.0 else 0.0,
+                self.layout.analyser_ghz or 0.0,
+            )
+            for name, time_ps in zip(SPECTRA, self["coherence_time_ps"].value, strict=True)
+        ]
+        return Estimate(*(np.concatenate(part) for part in zip(*found, strict=True)))
+
+
+def _mirrored(half: Real) -> Real:
+    """An even curve on signed lags from that on lags ≥ 0."""
+    return np.concatenate([half[..., :0:-1], half], axis=-1)

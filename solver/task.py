@@ -6,9 +6,10 @@ from typing import ClassVar
 
 import numpy as np
 
-from solver.experiment import Experiment
+from solver.budget import GridUse
+from solver.experiment import Amplifier, Experiment, Receiver
+from solver.findings import Invariants, LinearRegime, Picture, Scales
 from solver.grid import Field, Real
-from solver.result import LinearRegime, Picture
 
 
 @dataclass(frozen=True)
@@ -27,6 +28,8 @@ Schedule = tuple[Leg, ...]
 
 CHUNK = 16
 """Realizations whose sums are kept together, on grids of ordinary size."""
+APART = "apart"
+"""Outcome of a point whose receiver needs shorter steps than those beside it: it goes alone."""
 PILOTED = 4
 """Realizations on which the schedule is found and the discretization error is measured."""
 
@@ -68,14 +71,43 @@ class Task:
 
 
 @dataclass(frozen=True)
+class Beside:
+    """Another point that sees the same light at the end of the line, and what it sees it with."""
+
+    variant: int
+    point: int
+    preamplifier: Amplifier
+    receiver: Receiver
+
+
+@dataclass(frozen=True)
 class RoundTask(Task):
     """Realizations ``first`` to ``first + count − 1`` of a point, in chunks whose sums are kept
-    apart; ``schedule`` is None in the first round, which finds it."""
+    apart; ``schedule`` is None in the first round, which finds it.
+
+    beside: further points of which the same fields tell, without being propagated again.
+    """
 
     kind: ClassVar[str] = "round"
     first: int
     count: int
     schedule: Schedule | None
+    beside: tuple[Beside, ...] = ()
+
+    @property
+    def places(self) -> list[tuple[int, int]]:
+        """(variant, point) of all points that the task tells of, its own first."""
+        return [(self.variant, self.point), *((b.variant, b.point) for b in self.beside)]
+
+    def experiments(self) -> list[Experiment]:
+        """Those of :attr:`places`."""
+        alike = [
+            self.experiment.model_copy(
+                update={"preamplifier": other.preamplifier, "receiver": other.receiver}
+            )
+            for other in self.beside
+        ]
+        return [self.experiment, *alike]
 
 
 @dataclass(frozen=True)
@@ -98,6 +130,9 @@ class Findings:
     discretization_error: float
     picture: Picture
     linear: LinearRegime
+    invariants: Invariants
+    scales: Scales
+    use: GridUse
 
 
 @dataclass(frozen=True)
@@ -105,17 +140,18 @@ class RoundOutcome:
     """Features of a round's realizations, or the outcome that ended it early.
 
     blocks: (realizations, block features); sums: (chunks, 2, mean features). transforms: of
-    batches, counted once each; seconds: what the task took, which decides nothing but how many
-    realizations the next ones get.
+    batches, for each chunk; seconds: what the task took, which decides nothing but how many
+    realizations the next ones get. beside: the outcomes of the points beside.
     """
 
     outcome: str
     advice: str = ""
     blocks: Real = field(default_factory=lambda: np.zeros((0, 0)))
     sums: Real = field(default_factory=lambda: np.zeros((0, 2, 0)))
-    transforms: int = 0
+    transforms: tuple[int, ...] = ()
     seconds: float = 0.0
     findings: Findings | None = None
+    beside: "tuple[RoundOutcome, ...]" = ()
 
 
 @dataclass(frozen=True)

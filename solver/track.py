@@ -52,14 +52,27 @@ class Light:
 
 
 @dataclass(frozen=True)
+class _Stretch:
+    """A part of one section between two borders; ``joint`` is what its end lets through."""
+
+    section: int
+    start_km: float
+    end_km: float
+    recorded: bool
+    joint: float = 1.0
+
+
+@dataclass(frozen=True)
 class Piece:
-    """Equal steps within one section; ``recorded`` where its end is to be observed."""
+    """Equal steps within one section; ``recorded`` where its end is to be observed, and
+    ``joint`` the amplitude that passes there."""
 
     section: int
     steps: int
     step_km: float
     end_km: float
     recorded: bool
+    joint: float = 1.0
 
 
 class Wave:
@@ -127,17 +140,19 @@ class Track:
         self._stretches = list(self._cut([z for z in recorded_km if z > 0.0]))
         self._operators: dict[tuple[Any, ...], tuple[list[Any], int]] = {}
 
-    def _cut(self, recorded_km: Sequence[float]) -> Iterator[tuple[int, float, float, bool]]:
-        """Yield (section, start, end, recorded) of every stretch between two borders."""
+    def _cut(self, recorded_km: Sequence[float]) -> Iterator[_Stretch]:
+        """Yield every stretch between two borders."""
         tiny = 1e-9 * self.length_km
         start = border = 0.0
         for index, section in enumerate(self.sections):
             border += section.length_km
             inside = [z for z in recorded_km if start + tiny < z < border - tiny]
             seen_at_border = any(abs(z - border) <= tiny for z in recorded_km)
-            for end, recorded in [*((z, True) for z in inside), (border, seen_at_border)]:
-                yield index, start, end, recorded
+            for end in inside:
+                yield _Stretch(index, start, end, recorded=True)
                 start = end
+            yield _Stretch(index, start, border, seen_at_border, section.joint)
+            start = border
 
     def weights(self, scheme: Scheme, light: Light) -> Real:
         """Relative number of steps each stretch deserves: ∫ c^{1/(p+1)} dz.
@@ -153,14 +168,17 @@ class Track:
         weights = []
         power = light.power_w
         rates = [_linear_rate(section.rate, light.density) for section in self.sections]
-        for index, start, end, _ in self._stretches:
-            section = self.sections[index]
-            decay = math.exp(-section.attenuation_per_km * (end - start))
+        for stretch in self._stretches:
+            section = self.sections[stretch.section]
+            length = stretch.end_km - stretch.start_km
+            decay = math.exp(-section.attenuation_per_km * length)
             kerr = 0.5 * (section.kerr_self + section.kerr_cross) * power * math.sqrt(decay)
-            linear = rates[index]
-            error = kerr * (linear * (kerr + linear) ** (p - 1) + section.attenuation_per_km**p)
-            weights.append((end - start) * error ** (1 / (p + 1)))
-            power *= decay
+            linear = rates[stretch.section]
+            error = kerr * (
+                linear * (kerr + linear) ** (p - 1) + abs(section.attenuation_per_km) ** p
+            )
+            weights.append(length * error ** (1 / (p + 1)))
+            power *= decay * stretch.joint**2
         return np.array(weights)
 
     def pieces(self, weights: Real, steps: float) -> list[Piece]:
@@ -172,13 +190,23 @@ class Track:
         total = float(weights.sum()) or 1.0
         density_per_km = np.zeros(len(self.sections))
         for stretch, weight in zip(self._stretches, weights, strict=True):
-            length_km = self.sections[stretch[0]].length_km
-            density_per_km[stretch[0]] += steps * float(weight) / total / length_km
+            length_km = self.sections[stretch.section].length_km
+            density_per_km[stretch.section] += steps * float(weight) / total / length_km
         pieces = []
-        for section, start, end, recorded in self._stretches:
-            wanted = (end - start) * float(density_per_km[section])
+        for stretch in self._stretches:
+            length_km = stretch.end_km - stretch.start_km
+            wanted = length_km * float(density_per_km[stretch.section])
             count = max(1, math.ceil(wanted - ROUNDED_OFF))
-            pieces.append(Piece(section, count, (end - start) / count, end, recorded))
+            pieces.append(
+                Piece(
+                    stretch.section,
+                    count,
+                    length_km / count,
+                    stretch.end_km,
+                    stretch.recorded,
+                    stretch.joint,
+                )
+            )
         return pieces
 
     def _flows(
@@ -203,8 +231,8 @@ class Track:
                 outwards = inside[1:half] & inside[:half:-1]
                 bins = half if outwards.all() else 1 + int(np.argmin(outwards))
             scaled = inside / self.grid.samples
-            made: dict[float, Field] = {
-                part: (np.exp(rate * (part * piece.step_km)) * scaled).astype(precision)
+            made = {
+                part: _flow(rate, part * piece.step_km, scaled, precision)
                 for part in set(scheme.linear)
             }
             if self.grid.samples * len(self._operators) > 2**22:
@@ -223,6 +251,7 @@ class Track:
         observe: Observer | None = None,
         phases: bool = False,
         sparing: bool = False,
+        axes: Sequence[Complex | None] | None = None,
     ) -> Outcome:
         """Propagate a wave in place, as far as its outcome allows.
 
@@ -232,6 +261,7 @@ class Track:
         allowed at such an end is edge_limit times this, and ``steps_too_long`` the outcome of more.
         observe: called at recorded distances; one that reads fields, not powers only, asks for
         ``phases``. sparing: look at the spectrum at the end of the last piece only.
+        axes: of each section, shape (2, 2) or (realizations, 2, 2), instead of its own.
         """
         buffer, forward, inverse = wave.field, wave.work.forward, wave.work.inverse
         recorded = 0
@@ -242,9 +272,10 @@ class Track:
             limit = edge_limit * (guard if 2 * bins < self.grid.samples else 1.0)
             turn_own = section.kerr_self * piece.step_km
             turn_other = section.kerr_cross * piece.step_km
-            if section.axes is not None:
+            turn = section.axes if axes is None else axes[piece.section]
+            if turn is not None:
                 wave.settle()
-                _turn_axes(buffer, section.axes)
+                _turn_axes(buffer, turn)
             for step in range(piece.steps):
                 for stage, flow in enumerate(flows):
                     wave.turn(scheme.kerr[stage] * turn_own, scheme.kerr[stage] * turn_other)
@@ -257,9 +288,12 @@ class Track:
                     linear_flow(buffer, flow)
                     inverse()
                 wave.turn(scheme.kerr[-1] * turn_own, scheme.kerr[-1] * turn_other)
-            if section.axes is not None:
+            if turn is not None:
                 wave.settle()
-                _turn_axes(buffer, section.axes.conj().T)
+                _turn_axes(buffer, turn.conj().swapaxes(-1, -2))
+            if piece.joint != 1.0:
+                wave.settle()
+                buffer *= piece.joint
             if piece.recorded:
                 recorded += 1
                 if phases:
@@ -319,6 +353,14 @@ def expected_steps(weights: Real, scheme: Scheme, tolerance: float) -> float:
     return float((ERROR_CONSTANT[p] * float(weights.sum()) ** (p + 1) / tolerance) ** (1 / p))
 
 
+def _flow(rate: Complex, length_km: float, scale: Real, precision: type) -> Field:
+    """exp(rate·length)·scale; real functions take a tenth of the complex one's time."""
+    size, phase = np.exp(rate.real * length_km) * scale, rate.imag * length_km
+    made: Field = np.empty(rate.shape, dtype=precision)
+    made.real, made.imag = size * np.cos(phase), size * np.sin(phase)
+    return made
+
+
 def _linear_rate(rate: Complex, density: Real) -> float:
     """Spread of the linear phase rate over a spectrum, both components, rad/km."""
     mean = (density * rate.imag).sum(axis=1, keepdims=True)
@@ -326,6 +368,8 @@ def _linear_rate(rate: Complex, density: Real) -> float:
 
 
 def _turn_axes(field: Field, axes: Complex) -> None:
-    first = axes[0, 0] * field[:, 0] + axes[0, 1] * field[:, 1]
-    second = axes[1, 0] * field[:, 0] + axes[1, 1] * field[:, 1]
+    """Multiply (realizations, 2, samples) by one matrix, or by one for each realization."""
+    entry = axes[..., None].astype(field.dtype)
+    first = entry[..., 0, 0, :] * field[:, 0] + entry[..., 0, 1, :] * field[:, 1]
+    second = entry[..., 1, 0, :] * field[:, 0] + entry[..., 1, 1, :] * field[:, 1]
     field[:, 0], field[:, 1] = first, second

@@ -1,10 +1,15 @@
-"""Every check of the project: format, lint, types, tests. Stops at the first that fails."""
+"""Every check of the project: format, lint, types, tests. Stops at the first that fails.
+
+With ``--record`` the table of checks against the outside goes into DEVELOPERS.md at the end.
+"""
 
 import os
 import shutil
 import subprocess
 import sys
 from pathlib import Path
+
+from tests.checks import TABLE, put_record
 
 ROOT = Path(__file__).parent.parent
 CHECKS = (
@@ -17,6 +22,9 @@ CHECKS = (
 
 def main(arguments: list[str]) -> int:
     """Run the checks; further arguments go to pytest. Exit status of the first failure."""
+    recorded = "--record" in arguments
+    arguments = [argument for argument in arguments if argument != "--record"]
+    TABLE.unlink(missing_ok=True)
     if not os.environ.get("CHROMIUM") and not shutil.which("chromium"):
         # The browser tests need one; where no package provides it, playwright brings its own.
         install = ("playwright", "install", "--with-deps", "chromium")
@@ -27,6 +35,8 @@ def main(arguments: list[str]) -> int:
         status = subprocess.run([sys.executable, "-m", *command], cwd=ROOT).returncode
         if status:
             return status
+    if recorded and TABLE.exists():
+        put_record()
     return 0
 
 

@@ -5,6 +5,7 @@ from pathlib import Path
 
 import pytest
 
+from tests.checks import write_record
 from tests.serving import LiveServer
 
 
@@ -23,3 +24,8 @@ def own_server(tmp_path: Path) -> Iterator[LiveServer]:
     live = LiveServer(tmp_path / "data")
     yield live
     live.stop()
+
+
+def pytest_sessionfinish() -> None:
+    """Leave the record of the checks against the outside."""
+    write_record()

@@ -71,28 +71,111 @@ def wall_places(contrast: Real) -> list[Real]:
 
 
 def domain_counts(
-    intensity: Real, width: int, longest: float, contrast_counts: Real, walls: Real
+    intensity: Real,
+    width: int,
+    longest: float,
+    contrast: Real,
+    contrast_counts: Real,
+    walls: Real,
 ) -> None:
-    """Histogram of the contrast; number of walls and histogram of the durations between them."""
-    contrast = smoothed_contrast(intensity, width)
-    edges = np.linspace(0.0, longest, walls.shape[1])
-    for row, places in zip(walls, wall_places(contrast), strict=True):
+    """Contrast and its histogram; number of walls, sum of their widths, histogram of durations."""
+    contrast[:] = smoothed_contrast(intensity, width)
+    edges = np.linspace(0.0, longest, walls.shape[1] - 1)
+    for row, values, places in zip(walls, contrast, wall_places(contrast), strict=True):
         row[0] += len(places)
+        before = np.floor(places).astype(int) % len(values)
+        slopes = np.abs(values[(before + 1) % len(values)] - values[before])
+        row[1] += np.minimum(2.0 / slopes, longest).sum()
         if len(places) > 1:
             durations = np.diff(places, append=places[0] + contrast.shape[1])
-            row[1:] += np.histogram(durations, edges)[0]
+            row[2:] += np.histogram(durations, edges)[0]
     edges = np.linspace(-1.0, 1.0, contrast_counts.shape[1] + 1)
     for row, values in zip(contrast_counts, contrast, strict=True):
         row += np.histogram(np.clip(values, -1.0, 1.0), edges)[0]
 
 
 def map_levels(powers: Real, scale_w: float) -> npt.NDArray[np.uint8]:
-    """Levels of contrast and of both powers, rounded half up; shape (3, rows, columns)."""
-    first, second = np.moveaxis(powers, 1, 0)
-    total = first + second
-    contrast = (first - second) / np.where(total > 0.0, total, 1.0)
-    levels = [127.5 * (contrast + 1.0), first / scale_w, second / scale_w]
+    """Levels of contrast, both powers and S2, S3 if given, rounded half up."""
+    first, second, *rest = np.moveaxis(powers, 1, 0)
+    part = 1.0 / np.where(first + second > 0.0, first + second, np.inf)
+    shares = [127.5 * (np.clip(x * part, -1.0, 1.0) + 1.0) for x in (first - second, *rest)]
+    levels = [shares[0], first / scale_w, second / scale_w, *shares[1:]]
     return np.minimum(np.floor(np.stack(levels) + 0.5), 255.0).astype(np.uint8)
+
+
+def field_walls(field: Array, width: int) -> Real:
+    """Number of walls of each realization, from its fields."""
+    power = np.abs(np.asarray(field, dtype=np.complex128)) ** 2
+    return np.array([len(places) for places in wall_places(smoothed_contrast(power, width))], float)
+
+
+def stokes(field: Array) -> Real:
+    """S0 to S3 of fields of shape (…, 2, samples); shape (…, 4, samples)."""
+    u, v = np.moveaxis(np.asarray(field, dtype=np.complex128), -2, 0)
+    p, q, product = np.abs(u) ** 2, np.abs(v) ** 2, 2.0 * np.conj(u) * v
+    return np.stack([p + q, p - q, product.real, product.imag], axis=-2)
+
+
+def sphere_counts(field: Array, counts: Real) -> Real:
+    """Histogram over the Poincaré sphere, of S3/S0 and the angle of (S1, S2); mean of S0 to S3."""
+    found = stokes(field)
+    ends = [np.linspace(-1.0, 1.0, counts.shape[1] + 1)]
+    ends.append(np.linspace(-np.pi, np.pi, counts.shape[2] + 1))
+    for row, (s0, s1, s2, s3) in zip(counts, found, strict=True):
+        lit = s0 > 0.0
+        height = np.clip(s3[lit] / s0[lit], -1.0, 1.0)
+        row += np.histogram2d(height, np.arctan2(s2, s1)[lit], ends)[0]
+    return np.asarray(found.mean(axis=-1))
+
+
+def local_polarization(field: Array, width: int) -> Real:
+    """Time mean of the degree of polarization of running means over ``width`` samples."""
+    found = stokes(field)
+    running = sum(np.roll(found, -shift, axis=2) for shift in range(width))
+    s0 = running[:, 0]
+    degree = np.linalg.norm(running[:, 1:], axis=1) / np.where(s0 > 0.0, s0, 1.0)
+    return np.asarray(np.where(s0 > 0.0, degree, 0.0).mean(axis=1))
+
+
+def intensity_counts(intensity: Real, mean_w: Real, top: float, counts: Real) -> None:
+    """Histograms of I1, I2 and their sum, each over its mean."""
+    edges = np.linspace(0.0, top, counts.shape[2] + 1)
+    for rows, (first, second) in zip(counts, np.asarray(intensity, np.float64), strict=True):
+        values = (first, second, first + second)
+        for row, value, mean in zip(rows, values, (*mean_w, sum(mean_w)), strict=True):
+            if mean > 0.0:
+                row += np.histogram(value[value < top * mean] / mean, edges)[0]
+
+
+def quadrature_counts(field: Array, deviation: Real, top: float, counts: Real) -> None:
+    """Histogram of real and imaginary parts of both components over their deviations."""
+    edges = np.linspace(-top, top, counts.shape[1] + 1)
+    for row, components in zip(counts, np.asarray(field, np.complex128), strict=True):
+        for line, size in zip(components, deviation, strict=True):
+            if size > 0.0:
+                values = np.concatenate([line.real, line.imag]) / size
+                row += np.histogram(values[values < top], edges)[0]
+
+
+def spectral_lines(spectrum: Array, kept: int, density: Real, sums: Real) -> None:
+    """Line powers by optical frequency, in bins and in sums."""
+    samples = spectrum.shape[2]
+    power = np.abs(np.asarray(spectrum, np.complex128)) ** 2
+    offset = -np.rint(np.fft.fftfreq(samples) * samples)
+    order = np.argsort(offset)
+    offset, power = offset[order], power[..., order]
+    parts = [power, offset * power, offset**2 * power, power[..., 1:] * power[..., :-1]]
+    sums[:] = np.stack([part.sum(axis=2) for part in parts], axis=-1)
+    edges = np.linspace(0.5 - kept / 2, 0.5 + kept / 2, density.shape[2] + 1)
+    flat = density.reshape(-1, density.shape[2])
+    for row, lines in zip(flat, power.reshape(-1, samples), strict=True):
+        row += np.histogram(offset, edges, weights=lines)[0] / (kept // density.shape[2])
+
+
+def column_stokes(field: Array, columns: int) -> Real:
+    """Means of both powers, S2 and S3 in equal parts of the window; shape (4, columns)."""
+    found = stokes(field).reshape(4, columns, -1).mean(axis=2)
+    return np.concatenate([column_powers(field, columns), found[2:]])
 
 
 @dataclass(frozen=True)
@@ -313,3 +396,18 @@ def stirred_light(
     field = np.fft.ifft(amplitude * (parts[0] + 1j * parts[1]))
     mean = np.mean(np.abs(field) ** 2, axis=(0, 2), keepdims=True)
     return np.asarray(field * np.sqrt(power_w / mean))
+
+
+def spectral_moments(spectrum: np.ndarray, passed: np.ndarray) -> np.ndarray:
+    """Means of two intensities, their squares and product, by way of time.
+
+    spectrum: rfft/samples, (realizations, 2, bins); passed: power transfer, twice where a bin
+    stands for the negative frequency too.
+    """
+    stands_for = np.full(len(passed), 2.0)
+    stands_for[[0, -1]] = 1.0
+    samples = 2 * (len(passed) - 1)
+    filtered = spectrum * np.sqrt(passed / stands_for)
+    first, second = np.moveaxis(np.fft.irfft(filtered, n=samples, norm="forward"), 1, 0)
+    products = [first, second, first**2, second**2, first * second]
+    return np.stack([product.mean(axis=1) for product in products], axis=1)

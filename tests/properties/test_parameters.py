@@ -190,7 +190,7 @@ def test_any_study_is_valid_or_an_error(tree: dict[str, Any]) -> None:
     again = Study.model_validate(json.loads(study.model_dump_json()))
     assert again == study
     assert again.identity == study.identity
-    study.experiment_at(len(study.variants) - 1, study.sweep.points - 1)
+    study.experiment_at(len(study.curves) - 1, study.sweep.points - 1)
 
 
 @many

