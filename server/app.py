@@ -18,7 +18,7 @@ from server.engine import Engine
 from server.errors import DiskFull, ServerError, error_response
 from server.lifecycle import IllegalTransition
 from server.middleware import SECURITY_HEADERS, BodyLimit, SecurityHeaders
-from server.routes import overlay, pages, runs, sessions, system
+from server.routes import fibres, overlay, pages, plan, runs, sessions, spectra, system
 from server.runs import Runs
 from server.schemas import ErrorBody
 from server.sessions import Sessions
@@ -84,7 +84,7 @@ def create_app(settings: Settings, storage: Storage | None = None) -> FastAPI:
     )
     app.state.settings = settings
     _handle_errors(app)
-    for module in (runs, sessions, overlay, system, pages):
+    for module in (runs, plan, sessions, overlay, spectra, fibres, system, pages):
         app.include_router(module.router)
     pages.mount(app)
     # The last one added is the outermost.
@@ -124,7 +124,8 @@ def _handle_errors(app: FastAPI) -> None:
 
     @app.exception_handler(RequestValidationError)
     async def invalid(request: Request, error: RequestValidationError) -> JSONResponse:
-        root = Study if request.url.path == "/api/runs" and request.method == "POST" else None
+        takes_study = request.method == "POST" and request.url.path in ("/api/runs", "/api/plan")
+        root = Study if takes_study else None
         return error_response(first_problem(error.errors(), root))
 
     @app.exception_handler(HTTPException)

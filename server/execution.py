@@ -17,7 +17,7 @@ from server.engine import Engine
 from server.stream import rounded
 from solver.experiment import Study
 from solver.result import StudyResult
-from solver.study import MapRows, StudyState, execute
+from solver.study import MapRows, StudyState, execute, places
 from solver.task import Task
 
 _SETTLING_S = 1.0
@@ -173,7 +173,7 @@ class Execution:
         for task, outcome in outcomes:
             ready += state.absorb(task, outcome)
             self._untold.update(state.touched(task))
-            self._unsaved.add((task.variant, task.point))
+            self._unsaved.update(places(task))
             rows = state.live_map_rows(task, outcome)
             if rows is not None:
                 self.live_map = {"variant": rows.variant, "point": rows.point}

@@ -5,28 +5,27 @@ turns its models into the sections and entries that the templates draw.
 """
 
 import types
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cache
 from typing import Any, Literal, Union, get_args, get_origin
 
 import annotated_types
 from pydantic.fields import FieldInfo
 
+from solver.columns import Strays
 from solver.experiment import (
-    Ensemble,
     Experiment,
-    Launch,
-    Receiver,
-    Relation,
-    Source,
+    MeasuredSpectrum,
     Span,
     Stage,
     Study,
     Sweep,
     numeric_parameters,
 )
+from solver.legend import AxisUnit, LevelUnit, Per
+from solver.measured import Gaps, Negative
 
-EntryKind = Literal["number", "integer", "choice", "text"]
+EntryKind = Literal["number", "integer", "choice", "text", "spectrum"]
 
 POWER_PATH = "launch.total_power_mw"
 """The one parameter that may be typed in dBm as well."""
@@ -46,7 +45,13 @@ CHOICE_LABELS = {
     "bessel4": "Bessel, 4th order",
     "butterworth4": "Butterworth, 4th order",
     "log": "logarithmic",
+    "auto": "as the file says",
+    "um": "µm",
+    "zero": "as zero",
 }
+
+SWITCHED = ("shaper", "booster", "preamplifier")
+"""Stages that may be absent altogether."""
 
 
 @dataclass(frozen=True)
@@ -66,6 +71,14 @@ class Entry:
     when: dict[str, list[str]] = field(default_factory=dict)
     power: bool = False
     alternative: str = ""
+    rare: bool = False
+
+    @property
+    def switched(self) -> bool:
+        """Whether the default takes the effect away, so that a value switches it on."""
+        if self.kind != "number" or self.alternative:
+            return False
+        return self.optional or self.default == 0.0
 
     @property
     def key(self) -> str:
@@ -90,6 +103,7 @@ class Section:
     title: str
     help: str
     entries: list[Entry]
+    switched: bool = False
 
 
 def _number(value: float) -> str:
@@ -116,6 +130,8 @@ def _kind(annotation: Any) -> EntryKind:
         return "choice"
     if annotation is int:
         return "integer"
+    if annotation is MeasuredSpectrum:
+        return "spectrum"
     return "number" if annotation is float else "text"
 
 
@@ -156,51 +172,93 @@ def _entry(prefix: str, name: str, info: FieldInfo) -> Entry:
     )
 
 
-def _section(key: str, prefix: str, model: type[Stage]) -> Section:
+def _section(key: str, prefix: str, model: type[Stage], *, title: str = "") -> Section:
+    entries = [_entry(prefix, name, info) for name, info in model.model_fields.items()]
     return Section(
         key=key,
-        title=key.capitalize(),
+        title=title or key.capitalize(),
         help=(model.__doc__ or "").strip().splitlines()[0],
-        entries=[_entry(prefix, name, info) for name, info in model.model_fields.items()],
+        entries=[_folded(entry) for entry in entries] if model is Span else entries,
+        switched=key in SWITCHED,
     )
+
+
+def _folded(entry: Entry) -> Entry:
+    """An entry of a span, folded away unless most lines need it: those that the default gives."""
+    name = entry.path.rpartition(".")[2]
+    needed = Experiment().line[0].model_fields_set | {"coupling"}
+    rare = not needed & {name, entry.alternative, *entry.when}
+    return replace(entry, rare=rare)
 
 
 @cache
 def sections() -> list[Section]:
-    """The form's sections in the order in which the light meets them, then the sweep.
+    """The form's sections in the order in which the light meets them, then the sweeps.
 
     The entries of the line stand for one span; their paths hold ``__n__`` for its number.
     """
+    stages = []
+    for name, info in Experiment.model_fields.items():
+        prefix, model = f"experiment.{name}", info.annotation
+        if name == "line":
+            prefix, model = f"{prefix}.__n__", Span
+        assert isinstance(model, type)
+        stages.append(_section(name, prefix, model))
     return [
-        _section("source", "experiment.source", Source),
-        _section("relation", "experiment.relation", Relation),
-        _section("launch", "experiment.launch", Launch),
-        _section("line", "experiment.line.__n__", Span),
-        _section("receiver", "experiment.receiver", Receiver),
-        _section("ensemble", "experiment.ensemble", Ensemble),
+        *stages,
         _section("sweep", "sweep", Sweep),
+        _section("second", "second", Sweep, title="Second sweep"),
+    ]
+
+
+SPECTRUM_CHOICES = [
+    ("axis", "First column", AxisUnit),
+    ("level", "Levels", LevelUnit),
+    ("per", "Power within a width of", Per),
+    ("gaps", "Gaps", Gaps),
+    ("negative", "Negative powers", Negative),
+    ("strays", "Text among the numbers", Strays),
+]
+
+
+def spectrum_choices() -> list[tuple[str, str, list[tuple[str, str]]]]:
+    """(name, title, choices) of what may be said about a spectrum that is imported."""
+    return [
+        (name, title, [(value, _choice_label(value)) for value in get_args(literal)])
+        for name, title, literal in SPECTRUM_CHOICES
     ]
 
 
 @cache
 def page_data() -> dict[str, Any]:
-    """What the form's script needs: the default study and the parameters a sweep may run over."""
+    """What the page's script needs: the default study, every parameter and those to sweep."""
     entries = {entry.path: entry for section in sections() for entry in section.entries}
+    swept = {path for path, _, _ in numeric_parameters()}
     parameters = []
-    for path, title, unit in numeric_parameters():
-        entry = entries["experiment." + path.replace("*", "__n__")]
+    for path, entry in entries.items():
+        inside = path.removeprefix("experiment.").replace("__n__", "*")
+        if inside == path:
+            continue
         parameters.append(
             {
-                "path": path,
-                "title": title,
-                "unit": unit,
+                "path": inside,
+                "title": entry.title,
+                "unit": entry.unit,
                 "low": entry.low,
                 "high": entry.high,
+                "default": entry.default if entry.kind != "spectrum" else None,
+                "when": entry.when,
+                "swept": inside in swept,
+                "switched": entry.switched,
+                "rare": entry.rare,
             }
         )
     return {
         "defaults": Study().model_dump(mode="json"),
         "span": Experiment().line[0].model_dump(mode="json"),
+        "second": Sweep(
+            parameter="line.*.length_km", start=2.0, stop=8.0, points=4, spacing="linear"
+        ).model_dump(mode="json"),
         "parameters": parameters,
         "power_path": POWER_PATH,
     }

@@ -106,7 +106,7 @@ class Ladder:
         """
         bench = Bench(at_power(self._power_mw))
         passage = bench.passage
-        found = pilot(bench, passage.fields(range(PILOTED)))
+        found = pilot(bench, passage.fields(range(PILOTED)), range(PILOTED))
         if found.outcome.kind != "completed":
             raise RuntimeError(found.outcome.advice)
         launched = passage.fields(range(1))

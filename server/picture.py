@@ -64,6 +64,6 @@ def draw(study: Study, points: Points) -> str:
     values = study.sweep.values()
     curves = [
         [points.get((variant, point)) for point in range(len(values))]
-        for variant in range(len(study.variants))
+        for variant in range(len(study.curves))
     ]
     return curve_svg(values, study.sweep.spacing == "log", curves)

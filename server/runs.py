@@ -87,7 +87,7 @@ class Runs:
     async def submit(self, study: Study) -> tuple[RunRow, bool]:
         """The run of a study and whether it is new; an ended one is queued again."""
         run_id = study.identity
-        total = len(study.variants) * study.sweep.points
+        total = study.points_total
         new = await asyncio.to_thread(
             self._storage.add_run, run_id, title_of(study), study.model_dump_json(), total
         )
@@ -194,9 +194,9 @@ class Runs:
         """All that is known of one point now; raises NotFound when that is nothing."""
         record = await self._record(run_id)
         study = Study.model_validate_json(record.study)
-        if not (0 <= variant < len(study.variants) and 0 <= point < study.sweep.points):
+        if not (0 <= variant < len(study.curves) and 0 <= point < study.sweep.points):
             raise NotFound(
-                f"the study has variants 0 to {len(study.variants) - 1} and points 0 to "
+                f"the study has curves 0 to {len(study.curves) - 1} and points 0 to "
                 f"{study.sweep.points - 1}"
             )
         live = self._live.get(run_id)

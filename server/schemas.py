@@ -49,6 +49,7 @@ class Links(BaseModel):
     view: str
     result: str
     csv: str
+    along: str
     picture: str
 
 
@@ -132,6 +133,24 @@ class SessionChange(Wire):
     notes: Annotated[str, Field(max_length=200_000)] | None = None
 
 
+class Reason(BaseModel):
+    """What one effect asks of the window (ps) or of the band to either side (GHz)."""
+
+    title: str
+    value: float
+    unit: str
+    decides: bool
+
+
+class Plan(BaseModel):
+    """The grid chosen for a study, and why."""
+
+    window_ps: float
+    samples: int
+    time_step_ps: float
+    reasons: list[Reason]
+
+
 class Health(BaseModel):
     """Whether the server answers and its workers are there."""
 
@@ -146,6 +165,59 @@ class Access(BaseModel):
     may: Literal["write", "look"]
 
 
+class Preview(BaseModel):
+    """A spectrum in few points: GHz from the carrier, and power per frequency over its top."""
+
+    offset_ghz: list[float]
+    density: list[float]
+
+
+class Suggested(BaseModel):
+    """Choices worth making at the next import; null where there is none."""
+
+    floor_db: float | None
+
+
+class ImportedSpectrum(BaseModel):
+    """The part of a study's source that a file makes, and what was done to it."""
+
+    source: dict[str, Any]
+    remarks: list[str]
+    preview: Preview
+    suggested: Suggested
+
+
+class FibreKind(BaseModel):
+    """A kind of fibre: parameters of a span, length apart, and where they come from."""
+
+    key: str
+    title: str
+    group: str
+    span: dict[str, Any]
+    wavelength_nm: float
+    range_nm: tuple[float, float]
+    source: str
+    note: str
+    advice: str
+
+
+class FibreClassRow(BaseModel):
+    """What a Recommendation says of the dispersion at the carrier."""
+
+    key: str
+    title: str
+    source: str
+    sign: Literal["normal", "either", "anomalous"]
+    advice: str
+
+
+class FibreList(BaseModel):
+    """The catalogue."""
+
+    kinds: list[FibreKind]
+    classes: list[FibreClassRow]
+
+
 def run_links(run_id: str) -> Links:
     """Every address of one run."""
     api = f"/api/runs/{run_id}"
@@ -155,6 +227,7 @@ def run_links(run_id: str) -> Links:
         view=f"{api}/view",
         result=f"{api}/result",
         csv=f"{api}/curves.csv",
+        along=f"{api}/along.csv",
         picture=f"{api}/picture.svg",
     )
 

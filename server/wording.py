@@ -16,6 +16,10 @@ def title_of(study: Study) -> str:
     title, unit = names[study.sweep.parameter]
     curves = " · ".join(variant.name for variant in study.variants)
     span = f"{study.sweep.start:g}–{study.sweep.stop:g} {unit}".strip()
+    if study.second is not None:
+        other, other_unit = names[study.second.parameter]
+        ends = f"{study.second.start:g}–{study.second.stop:g} {other_unit}".strip()
+        span += f" × {other} {ends}"
     return f"{title} {span}: {curves}"[:200]
 
 

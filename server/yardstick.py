@@ -17,6 +17,7 @@ from typing import Any, TypeVar
 
 import numpy as np
 
+from solver.chain import Chain
 from solver.ensemble import Bench, pilot, run_round
 from solver.experiment import Experiment, Precision, Study, with_changes
 from solver.grid import Field
@@ -24,7 +25,7 @@ from solver.passage import Passage
 from solver.propagation import Propagation, propagate, relative_error
 from solver.schemes import SECOND_ORDER
 from solver.statistics import Blocks, central, last_central
-from solver.study import Chain, StudyState, execute
+from solver.study import StudyState, execute
 from solver.task import CHUNK, PILOTED, RoundTask, Schedule, Task
 from solver.track import Wave
 from solver.transforms import MOST_TOGETHER, batch_size, batches, resampled, transforms
@@ -353,7 +354,7 @@ def found_steps(power_mw: float, length_km: float) -> Found:
     experiment = with_changes(at_power(power_mw), {"line.*.length_km": length_km})
     bench = Bench(experiment)
     launched = bench.passage.fields(range(PILOTED))
-    found = pilot(bench, launched)
+    found = pilot(bench, launched, range(PILOTED))
     if found.outcome.kind != "completed":
         raise RuntimeError(found.outcome.advice)
     schedule = found.schedule

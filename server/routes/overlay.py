@@ -43,14 +43,14 @@ async def _find(runs: Runs, choice: str, where: str) -> tuple[str, StudyResult, 
     except NotFound as error:
         raise NotFound(error.message, where) from None
     variant = int(number)
-    if variant >= len(result.study.variants):
-        raise NotFound(f"run {run_id} has variants 0 to {len(result.study.variants) - 1}", where)
+    if variant >= len(result.study.curves):
+        raise NotFound(f"run {run_id} has variants 0 to {len(result.study.curves) - 1}", where)
     return record.title, result, variant
 
 
 def _curve(result: StudyResult, variant: int) -> dict[str, Any]:
     return {
-        "name": result.study.variants[variant].name,
+        "name": result.study.curves[variant].name,
         "sweep": result.axes.sweep(),
         "points": [None if point is None else point.summary() for point in result.points[variant]],
     }
@@ -71,8 +71,11 @@ def _flatten(tree: Any, prefix: str = "") -> Flat:
 
 def _parameters(study: Study, variant: int) -> Flat:
     """Every parameter of a curve by path, the swept one left out."""
-    experiment = with_changes(study.experiment, study.variants[variant].changes)
-    flat = _flatten(experiment.model_dump(mode="json"), "experiment")
+    experiment = with_changes(study.experiment, study.curves[variant].changes)
+    tree = experiment.model_dump(mode="json")
+    if experiment.source.measured is not None:
+        tree["source"]["measured"] = experiment.source.measured.label
+    flat = _flatten(tree, "experiment")
     swept = f"experiment.{study.sweep.parameter}".split(".")
     flat = {path: value for path, value in flat.items() if not _is_at(path.split("."), swept)}
     return flat | _flatten(study.sweep.model_dump(mode="json"), "sweep")

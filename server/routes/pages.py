@@ -23,6 +23,16 @@ from starlette.types import Scope
 from server import form
 
 WEB = Path(str(files("web")))
+TOPICS = [
+    ("correlations", "Correlations"),
+    ("line", "Along the line"),
+    ("spectra", "Spectra"),
+    ("domains", "Domains"),
+    ("polarization", "Polarization"),
+    ("intensities", "Intensities"),
+    ("budget", "Error budget"),
+]
+"""What the page shows of a point, one topic at a time."""
 IMMUTABLE = "public, max-age=31536000, immutable"
 
 router = APIRouter(include_in_schema=False, default_response_class=HTMLResponse)
@@ -93,6 +103,7 @@ def _environment() -> Environment:
         modules=_modules,
         library_styles=_library_styles,
         choices_of=form.choices_of,
+        spectrum_choices=form.spectrum_choices(),
     )
     return environment
 
@@ -107,7 +118,12 @@ def _page(request: Request, name: str, **context: Any) -> Response:
 
 
 def _bench(request: Request, *, shows_run: bool) -> Response:
-    context = {"sections": form.sections(), "data": form.page_data(), "shows_run": shows_run}
+    context = {
+        "sections": form.sections(),
+        "data": form.page_data(),
+        "topics": TOPICS,
+        "shows_run": shows_run,
+    }
     return _page(request, "bench", **context)
 
 

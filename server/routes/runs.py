@@ -13,7 +13,7 @@ from server.errors import NotFound
 from server.limits import check_study
 from server.schemas import Deleted, NewTitle, RunDetail, RunList, RunRow
 from solver.experiment import Study
-from solver.result import StudyResult, curves_csv
+from solver.result import StudyResult, along_csv, curves_csv
 
 router = APIRouter(prefix="/api/runs", tags=["runs"])
 
@@ -97,7 +97,7 @@ async def view_run(run_id: InPath, runs: TheRuns, log: TheLog) -> dict[str, Any]
 def _shown(result: StudyResult) -> dict[str, Any]:
     return {
         "axes": result.axes.to_json(),
-        "variants": [variant.model_dump(mode="json") for variant in result.study.variants],
+        "variants": [variant.model_dump(mode="json") for variant in result.study.curves],
         "points": [
             [None if point is None else point.summary() for point in curve]
             for curve in result.points
@@ -119,18 +119,20 @@ async def get_point(run_id: InPath, variant: int, point: int, runs: TheRuns) -> 
     responses={200: {"content": {"application/octet-stream": {}}}},
 )
 async def get_map(run_id: InPath, variant: int, point: int, runs: TheRuns) -> Response:
-    """The evolution map of one realization: uint8 (3, rows, columns), C order.
+    """The evolution map of one realization: uint8 (layers, rows, columns), C order.
 
-    Contrast: 0 is −1 and 255 is +1. Intensities: W per count in X-Map-Intensity-Scale.
+    Layers: contrast S1/S0 (0 is −1 and 255 is +1), the intensities of both components (W per
+    count in X-Map-Intensity-Scale), then S2/S0 and S3/S0 like the contrast.
     """
     picture = (await runs.open_point(run_id, variant, point)).picture
     if picture is None:
         raise NotFound("this point has no evolution map: its summary says so (has_map)")
-    _, rows, columns = picture.data.shape
+    layers, rows, columns = picture.data.shape
     return Response(
         picture.data.tobytes(),
         media_type="application/octet-stream",
         headers={
+            "X-Map-Layers": str(layers),
             "X-Map-Rows": str(rows),
             "X-Map-Columns": str(columns),
             "X-Map-Intensity-Scale": f"{picture.intensity_scale_w:.7g}",
@@ -159,6 +161,19 @@ async def get_curves(run_id: InPath, runs: TheRuns) -> Response:
     _, result = await runs.open_result(run_id)
     text = await asyncio.to_thread(curves_csv, result)
     disposition = f'attachment; filename="crossdip-{run_id}.csv"'
+    return Response(text, media_type="text/csv", headers={"Content-Disposition": disposition})
+
+
+@router.get(
+    "/{run_id}/along.csv",
+    response_class=Response,
+    responses={200: {"content": {"text/csv": {}}}},
+)
+async def get_along(run_id: InPath, runs: TheRuns) -> Response:
+    """C12(0) over swept parameters and distance as a table."""
+    _, result = await runs.open_result(run_id)
+    text = await asyncio.to_thread(along_csv, result)
+    disposition = f'attachment; filename="crossdip-{run_id}-along.csv"'
     return Response(text, media_type="text/csv", headers={"Content-Disposition": disposition})
 
 
