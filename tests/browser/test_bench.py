@@ -63,12 +63,9 @@ def test_the_headline_study_at_a_reduced_ensemble_draws_itself(
     for plot in ("map-0", "map-1", "map-2"):
         assert painted_share(page, plot) == 1.0
 
-    for plot in ("cross", "auto", "spectra", "distance", "contrast", "durations"):
-        box = page.locator(f'[data-plot="{plot}"]')
-        box.scroll_into_view_if_needed()
-        wait_for_plot(page, plot)
+    page.locator('[data-plot="cross"]').scroll_into_view_if_needed()
+    wait_for_plot(page, "cross")
     wait_for_values(page, "cross", "derivative, linear regime", 10)
-    expect(page.locator("[data-readout]")).to_contain_text("Walls")
 
     with page.expect_download() as kept:
         page.locator('[data-download="result"]').click()
@@ -167,7 +164,7 @@ def test_the_map_tells_what_is_under_the_pointer(page: Page, lab: LiveServer, do
     assert found
     axes = lab.get(f"/api/runs/{done}/view")["axes"]["map"]
     body = lab.client.get(f"/api/runs/{done}/maps/0/1")
-    shape = 3, int(body.headers["X-Map-Rows"]), int(body.headers["X-Map-Columns"])
+    shape = -1, int(body.headers["X-Map-Rows"]), int(body.headers["X-Map-Columns"])
     counts = np.frombuffer(body.content, np.uint8).reshape(shape)
     column = np.abs(np.array(axes["time_ps"]) - float(found[1])).argmin()
     row = np.abs(np.array(axes["distance_km"]) - float(found[2])).argmin()
@@ -272,7 +269,7 @@ def test_a_study_file_goes_out_and_comes_in_again(page: Page, done: str, tmp_pat
 def test_the_curve_over_power_and_distance_at_once(page: Page, lab: LiveServer, done: str) -> None:
     page.goto(f"/runs/{done}")
     wait_for_state(page, "Done")
-    page.locator("[data-overview] > summary").click()
+    page.locator('[data-topic="line"]').click()
     page.locator('[data-plot="overview"]').scroll_into_view_if_needed()
     values = [lab.get(f"/api/runs/{done}/points/0/{p}")["distance"]["value"] for p in range(2)]
     until(
@@ -288,7 +285,6 @@ def test_the_curve_over_power_and_distance_at_once(page: Page, lab: LiveServer, 
 def test_the_difference_from_the_first_variant(page: Page, lab: LiveServer, done: str) -> None:
     page.goto(f"/runs/{done}")
     wait_for_state(page, "Done")
-    page.locator("[data-differences] > summary").click()
     page.locator('[data-plot="difference"]').scroll_into_view_if_needed()
     first, second = lab.get(f"/api/runs/{done}/view")["points"]
     drawn = wait_for_values(page, "difference", "uncoupled", 2)

@@ -7,6 +7,7 @@ from playwright.sync_api import Page, expect
 
 from solver.experiment import Study
 from tests.browser.watching import Watch
+from tests.serving import LiveServer
 
 
 @pytest.fixture
@@ -14,7 +15,9 @@ def form(page: Page) -> Page:
     """The bench with every section of the form open and the server's defaults in it."""
     page.goto("/")
     page.wait_for_selector("[data-run]:not([disabled])")
-    page.evaluate("document.querySelectorAll('.stage').forEach((stage) => { stage.open = true; })")
+    page.evaluate(
+        "document.querySelectorAll('.stage, .rare').forEach((part) => { part.open = true; })"
+    )
     return page
 
 
@@ -179,3 +182,135 @@ def test_another_swept_parameter_brings_its_own_unit_and_range(form: Page) -> No
     expect(_entry(form, "sweep.start")).to_have_value("4")
     expect(_entry(form, "sweep.stop")).to_have_value("16")
     expect(form.locator('[data-field="sweep.start"] [data-unit]')).to_have_text("km")
+
+
+def test_the_stages_stand_in_the_order_in_which_the_light_meets_them(form: Page) -> None:
+    titles = form.locator(".stage-title").all_inner_texts()
+    assert titles == [
+        "Source",
+        "Relation",
+        "Shaper",
+        "Booster",
+        "Launch",
+        "Line",
+        "Preamplifier",
+        "Receiver",
+        "Ensemble",
+        "Sweep",
+        "Second sweep",
+        "Variants",
+    ]
+    for stage in ("shaper", "booster", "preamplifier"):
+        expect(form.locator(f'[data-summary="{stage}"]')).to_have_text("off")
+
+
+def test_an_effect_is_named_when_on_and_switched_off_and_on_again(form: Page) -> None:
+    _entry(form, "experiment.launch.pdl_db").fill("1.5")
+    summary = form.locator('[data-summary="launch"]')
+    expect(summary).to_contain_text("polarization-dependent loss 1.5 dB")
+    switch = form.locator('[data-switch="experiment.launch.pdl_db"]')
+    switch.click()
+    expect(summary).not_to_contain_text("loss")
+    expect(_entry(form, "experiment.launch.pdl_db")).to_have_value("0")
+    switch.click()
+    expect(_entry(form, "experiment.launch.pdl_db")).to_have_value("1.5")
+
+
+def test_a_whole_stage_is_switched_off_and_on_again(form: Page, watch: Watch) -> None:
+    watch.expect("ERR_FAILED")
+    _entry(form, "experiment.booster.noise_figure_db").fill("5")
+    _entry(form, "experiment.booster.bandpass_ghz").fill("120")
+    summary = form.locator('[data-summary="booster"]')
+    expect(summary).to_contain_text("noise figure 5 dB")
+    switch = form.locator('[data-stage-switch="booster"]')
+    switch.click()
+    expect(summary).to_have_text("off")
+    assert _asked(form) == Study().model_dump(mode="json")
+    switch.click()
+    expect(summary).to_contain_text("optical band-pass 120 GHz")
+    assert _asked(form)["experiment"]["booster"]["noise_figure_db"] == 5.0
+
+
+def test_a_kind_of_fibre_fills_a_span_and_says_where_its_figures_come_from(
+    form: Page, lab: LiveServer, watch: Watch
+) -> None:
+    watch.expect("ERR_FAILED")
+    kind = lab.get("/api/fibres", params={"wavelength_nm": 1552.0})["kinds"][0]
+    choice = form.locator("[data-fibre-kind]")
+    expect(choice).to_be_visible()
+    choice.select_option(kind["key"])
+    span = _asked(form)["experiment"]["line"][0]
+    assert span["length_km"] == 8.0
+    assert {name: span[name] for name in kind["span"] if name != "length_km"} == {
+        name: value for name, value in kind["span"].items() if name != "length_km"
+    }
+    expect(form.locator("[data-fibre-source]")).to_contain_text(kind["source"].rstrip("."))
+    _entry(form, "experiment.line.0.gamma_per_w_km").fill("9.87")
+    expect(choice).to_have_value("")
+
+
+def test_a_second_sweep_is_added_and_removed(form: Page, watch: Watch) -> None:
+    watch.expect("ERR_FAILED")
+    form.locator("[data-second-switch]").click()
+    _entry(form, "second.parameter").select_option("source.width_ghz")
+    expect(_entry(form, "second.start")).to_have_value("12")
+    expect(form.locator('[data-summary="second"]')).to_contain_text("width, 12 to 48 GHz")
+    assert _asked(form)["second"]["parameter"] == "source.width_ghz"
+    form.locator("[data-second-switch]").click()
+    expect(form.locator('[data-summary="second"]')).to_have_text("none")
+    assert _asked(form).get("second") is None
+
+
+def test_the_grid_is_chosen_on_demand_with_its_reasons(form: Page) -> None:
+    form.locator("[data-plan]").click()
+    reasons = form.locator("[data-plan-reasons] li")
+    expect(reasons.first).to_contain_text("samples of")
+    assert reasons.count() > 1
+    samples = int(_entry(form, "experiment.ensemble.samples").input_value())
+    assert samples & (samples - 1) == 0
+
+
+ANALYSER = "Wavelength (nm),Power (dBm)\n" + "".join(
+    f"{1551.0 + i * 0.02:.2f},{-20.0 - (i - 50) ** 2 / 50:.2f}\n" for i in range(101)
+)
+
+
+def _import(page: Page, text: str) -> None:
+    file = {"name": "analyser.csv", "mimeType": "text/csv", "buffer": text.encode()}
+    page.locator("[data-spectrum-file]").set_input_files(file)  # type: ignore[arg-type]
+
+
+def test_a_measured_spectrum_is_imported_shown_and_asked_for(form: Page, watch: Watch) -> None:
+    watch.expect("ERR_FAILED")
+    expect(form.locator("[data-spectrum]")).to_be_hidden()
+    _entry(form, "experiment.source.shape").select_option("measured")
+    _import(form, ANALYSER)
+    expect(form.locator("[data-spectrum-preview] svg")).to_be_visible()
+    expect(form.locator("[data-spectrum-about]")).to_contain_text("analyser.csv")
+    expect(form.locator('[data-summary="source"]')).to_contain_text("measured (analyser.csv)")
+    source = _asked(form)["experiment"]["source"]
+    assert source["shape"] == "measured"
+    assert len(source["measured"]["density"]) == len(source["measured"]["offset_ghz"]) > 50
+
+
+def test_a_spectrum_that_cannot_be_read_is_refused_with_its_line(form: Page, watch: Watch) -> None:
+    watch.expect("422")
+    _entry(form, "experiment.source.shape").select_option("measured")
+    _import(form, ANALYSER.replace("-20.00", "loud", 1))
+    fault = _fault(form, "experiment.source.measured")
+    expect(fault).to_contain_text("52")
+    expect(form.locator("[data-spectrum-preview]")).to_be_hidden()
+
+
+def test_a_spectrum_may_be_dropped_on_the_form(form: Page) -> None:
+    _entry(form, "experiment.source.shape").select_option("measured")
+    form.locator("[data-drop]").evaluate(
+        """(box, text) => {
+            const dataTransfer = new DataTransfer();
+            dataTransfer.items.add(new File([text], "dropped.csv", { type: "text/csv" }));
+            const how = { dataTransfer, bubbles: true, cancelable: true };
+            box.dispatchEvent(new DragEvent("drop", how));
+        }""",
+        ANALYSER,
+    )
+    expect(form.locator("[data-spectrum-about]")).to_contain_text("dropped.csv")

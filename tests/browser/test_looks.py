@@ -13,13 +13,18 @@ from tests.serving import LiveServer
 
 
 @pytest.mark.parametrize("theme", ["light", "dark"])
-@pytest.mark.parametrize("place", ["/", "run", "/library", "/sessions", "overlay"])
+@pytest.mark.parametrize(
+    "place", ["/", "run", "polarization", "budget", "/library", "/sessions", "overlay"]
+)
 def test_no_serious_accessibility_finding(page: Page, done: str, theme: str, place: str) -> None:
     page.emulate_media(color_scheme=theme)  # type: ignore[arg-type]
-    paths = {"run": f"/runs/{done}", "overlay": f"/overlay?curve={done}:0&curve={done}:1"}
+    topics = {name: f"/runs/{done}#topic={name}" for name in ("polarization", "budget")}
+    paths = topics | {"run": f"/runs/{done}", "overlay": f"/overlay?curve={done}:0&curve={done}:1"}
     page.goto(paths.get(place, place))
     page.wait_for_timeout(1000)
-    page.evaluate("document.querySelectorAll('.stage').forEach((stage) => { stage.open = true; })")
+    page.evaluate(
+        "document.querySelectorAll('.stage, .rare').forEach((part) => { part.open = true; })"
+    )
     report = Axe().run(page).response
     assert len(report["passes"]) > 10
     findings = report["violations"]
@@ -41,8 +46,13 @@ def test_a_phone_shows_everything_without_scrolling_sideways(
         wait_for_state(page, "Done")
         page.locator('[data-plot="dip"]').scroll_into_view_if_needed()
         wait_for_values(page, "dip", "coupled", 2)
-    width = page.evaluate("document.documentElement.scrollWidth")
-    assert width <= 375
+        for topic in page.locator("[data-topic]").all():
+            topic.click()
+            expect(topic).to_have_attribute("aria-selected", "true")
+            assert page.evaluate("document.documentElement.scrollWidth") <= 375
+    elif place == "/":
+        page.evaluate("document.querySelectorAll('details').forEach((d) => { d.open = true; })")
+    assert page.evaluate("document.documentElement.scrollWidth") <= 375
 
 
 def test_the_first_screen_of_a_run_shows_run_map_and_curve(page: Page, done: str) -> None:
@@ -120,7 +130,7 @@ def test_paper_gets_the_results_and_not_the_form(page: Page, done: str) -> None:
     expect(page.locator('[data-plot="dip"]')).to_be_visible()
     page.emulate_media(media="screen", color_scheme="dark")
     assert page.pdf(format="A4").startswith(b"%PDF")
-    assert "coupled" in curves(page, "durations")
+    assert "coupled" in curves(page, "cross")
     expect(page.locator("html")).to_have_attribute("data-theme", "auto")
 
 

@@ -76,6 +76,9 @@ function intensityMap(hue, drift) {
 /** Intensity of each component in the hue that its sign of the contrast has. */
 export const INTENSITY_MAPS = [intensityMap(HUE_1 - 22, 50), intensityMap(HUE_2 + 14, -50)];
 
+/** Densities, in a hue that neither component has. */
+export const DENSITY_MAP = table((x) => bytes(0.16 + 0.79 * x, 0.15 * Math.sin(Math.PI * (0.1 + 0.8 * x)), 190 - 70 * x));
+
 // Chosen by search, each as far as can be from those before it, in normal vision and in simulated
 // protan, deutan and tritan vision, at a contrast of 3 or more; a variant keeps its hue in both themes.
 const VARIANT_OKLCH = {

@@ -1,22 +1,29 @@
-// An evolution map that fills up row by row: contrast and the two intensities, a byte each.
+// An evolution map that fills up row by row, a byte each: contrast and the two intensities, and
+// S2/S0 and S3/S0 where the whole map has been fetched.
 
-export const QUANTITIES = ["contrast", "intensity1", "intensity2"];
+const GROWING = 3;
+
+/** Whether a plane holds intensities; the others hold what lies between −1 and 1. */
+export const isIntensity = (plane) => plane === 1 || plane === 2;
 
 export class Evolution {
   constructor(rows, columns) {
     this.rows = rows;
     this.columns = columns;
     this.scale = 0;
-    this.data = new Uint8Array(3 * rows * columns);
+    this.planes = GROWING;
+    this.data = new Uint8Array(GROWING * rows * columns);
     // How often each row has been taken in; 0 while it is awaited.
     this.filled = new Uint8Array(rows);
   }
 
-  /** Take in rows first..first+count, given as three planes one after the other. */
+  /** Take in rows first..first+count, given as planes one after the other. */
   absorb(planes, first, count, scale) {
     this.#bringTo(scale);
     const size = this.columns;
-    for (let plane = 0; plane < 3; plane += 1) {
+    const given = planes.length / (count * size);
+    if (given > this.planes) this.#widen(given);
+    for (let plane = 0; plane < given; plane += 1) {
       const from = plane * count * size;
       this.data.set(
         planes.subarray(from, from + count * size),
@@ -26,22 +33,29 @@ export class Evolution {
     for (let row = first; row < first + count; row += 1) this.filled[row] += 1;
   }
 
+  #widen(planes) {
+    const wider = new Uint8Array(planes * this.rows * this.columns);
+    wider.set(this.data);
+    Object.assign(this, { planes, data: wider });
+  }
+
   // Rows that arrived under another scale are requantized, so one scale holds for the whole map.
   #bringTo(scale) {
     if (this.scale && scale !== this.scale) {
       const factor = this.scale / scale;
-      for (let i = this.rows * this.columns; i < this.data.length; i += 1) {
+      const size = this.rows * this.columns;
+      for (let i = size; i < GROWING * size; i += 1) {
         this.data[i] = Math.min(255, Math.round(this.data[i] * factor));
       }
     }
     this.scale = scale;
   }
 
-  /** The quantity at a row and column: contrast in [−1, 1] or intensity in W; null when absent. */
+  /** The quantity at a row and column: a Stokes ratio in [−1, 1] or intensity in W; null when absent. */
   at(plane, row, column) {
-    if (!this.filled[row]) return null;
+    if (!this.filled[row] || plane >= this.planes) return null;
     const byte = this.data[(plane * this.rows + row) * this.columns + column];
-    return plane === 0 ? (2 * byte) / 255 - 1 : byte * this.scale;
+    return isIntensity(plane) ? byte * this.scale : (2 * byte) / 255 - 1;
   }
 }
 

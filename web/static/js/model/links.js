@@ -22,6 +22,9 @@ export const api = {
   session: (id) => `/api/sessions/${part(id)}`,
   restoreSession: (id) => `/api/sessions/${part(id)}/restore`,
   sessionRun: (session, run) => `/api/sessions/${part(session)}/runs/${part(run)}`,
+  fibres: (wavelengthNm) => `/api/fibres?wavelength_nm=${part(wavelengthNm)}`,
+  plan: "/api/plan",
+  spectra: (choices) => `/api/spectra?${new URLSearchParams(choices)}`,
   overlay: (curves) => `/api/overlay?${curveQuery(curves)}`,
 };
 

@@ -21,11 +21,11 @@ async function refusalOf(response) {
   }
 }
 
-async function send(method, url, body) {
+async function send(method, url, body, type = "application/json") {
   const options = { method, headers: {} };
   if (body !== undefined) {
-    options.headers["Content-Type"] = "application/json";
-    options.body = JSON.stringify(body);
+    options.headers["Content-Type"] = type;
+    options.body = type === "application/json" ? JSON.stringify(body) : body;
   }
   let response;
   try {
@@ -41,6 +41,8 @@ const json = async (method, url, body) => (await send(method, url, body)).json()
 
 export const get = (url) => json("GET", url);
 export const post = (url, body) => json("POST", url, body);
+/** Send a text or file as it is. */
+export const postText = async (url, body) => (await send("POST", url, body, "text/plain")).json();
 export const patch = (url, body) => json("PATCH", url, body);
 export const remove = (url) => json("DELETE", url);
 export const put = (url) => json("PUT", url);

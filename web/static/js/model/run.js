@@ -1,6 +1,7 @@
 // One run as the page knows it: what /view said, kept up to date by the event stream.
 
 import { Evolution, bytesOf } from "./evolution.js";
+import { withChanges } from "./study.js";
 
 export const TERMINAL = new Set(["done", "failed", "cancelled"]);
 
@@ -45,6 +46,29 @@ export class Run {
     const live = this.liveMap?.variant === variant && this.liveMap.point === point;
     const known = this.summary(variant, point)?.length_km ?? (live ? this.liveMap.lengthKm : null);
     return (known ?? this.lengthKm) / this.lengthKm;
+  }
+
+  /** How many values the second sweep has; each variant is a curve for each of them. */
+  get seconds() {
+    return this.axes.second?.values.length ?? 1;
+  }
+
+  /** The curve that a curve is compared with: the first variant at the same second value. */
+  firstOf(variant) {
+    return variant % this.seconds;
+  }
+
+  /** The curves of the variant that a curve belongs to, one for each value of the second sweep. */
+  siblingsOf(variant) {
+    const first = variant - (variant % this.seconds);
+    return Array.from({ length: this.seconds }, (_, i) => first + i);
+  }
+
+  /** The whole experiment of one point of one curve. */
+  experimentAt(variant, point) {
+    const { sweep } = this.axes;
+    const { changes } = this.variants[variant];
+    return withChanges(this.study.experiment, { ...changes, [sweep.parameter]: sweep.values[point] });
   }
 
   /** Distances at which C12(0) of a point is known, km. */

@@ -1,6 +1,7 @@
 // A study as the form edits it: paths into its tree, bounds, and one-line summaries.
 
-import { brief, parseNumber, plain } from "./quantities.js";
+import { amplifies, effects, lineEffects } from "./parameters.js";
+import { brief, parseNumber, plain, POWER_PATH } from "./quantities.js";
 
 export function read(tree, path) {
   return path.split(".").reduce((node, key) => (node == null ? undefined : node[key]), tree);
@@ -86,15 +87,17 @@ export const changeText = (value) => (typeof value === "number" ? plain(value) :
 const power = (mw, unit) =>
   unit === "dBm" ? `${brief(10 * Math.log10(mw), 3)} dBm` : `${brief(mw, 3)} mW`;
 
-/** One line for each closed section of the form. */
-export function summaries(study, { powerUnit, label, parameters }) {
-  const { source, relation, launch, line, receiver, ensemble } = study.experiment;
-  const { sweep } = study;
+/** One line for an axis of a study: "12 × total power, 5 mW to 800 mW". */
+function sweepLine(sweep, { powerUnit, parameters }) {
   const swept = parameters.find((one) => one.path === sweep.parameter);
   const ends =
-    sweep.parameter === "launch.total_power_mw"
+    sweep.parameter === POWER_PATH
       ? `${power(sweep.start, powerUnit)} to ${power(sweep.stop, powerUnit)}`
       : `${brief(sweep.start)} to ${brief(sweep.stop)} ${swept?.unit ?? ""}`;
+  return `${sweep.points} × ${swept?.title.toLowerCase() ?? sweep.parameter}, ${ends}`;
+}
+
+function lineSummary(line, parameters) {
   const length = line.reduce((sum, span) => sum + (span.length_km ?? 0), 0);
   const spans = line.length === 1 ? "1 span" : `${line.length} spans`;
   const dispersion = line[0].dispersion_ps_per_nm_km ?? null;
@@ -102,18 +105,63 @@ export function summaries(study, { powerUnit, label, parameters }) {
     dispersion === null
       ? `β2 ${brief(line[0].beta2_ps2_per_km)} ps²/km`
       : `D ${brief(dispersion)} ps/(nm·km)`;
+  return [`${spans}, ${brief(length)} km, ${fibre}`, ...lineEffects(line, parameters)].join(", ");
+}
+
+function receiverSummary(receiver, on, label) {
+  const filters = ["", "digitizer_"].flatMap((arm) =>
+    ((receiver[`${arm}filter`] ?? "none") === "none" ? [] : [
+      `${label(receiver[`${arm}filter`])} ${brief(receiver[`${arm}bandwidth_ghz`])} GHz`,
+    ]));
+  const words = ["shot_noise", "noise_correction"].flatMap((name) =>
+    (receiver[name] === "on" ? [name.replace("_", " ")] : []));
+  return [...filters, ...words, ...on].join(", ") || "ideal";
+}
+
+/** One line for each closed section of the form: what it is, and what is switched on. */
+export function summaries(study, { powerUnit, label, parameters }) {
+  const { source, relation, launch, line, receiver, ensemble } = study.experiment;
+  const on = (stage) => effects(study.experiment, stage, parameters);
+  const listed = (stage) => on(stage).join(", ") || "off";
   const stepPs = ensemble.window_ps / ensemble.samples;
-  const filter = receiver.filter === "none" ? "ideal" : `${brief(receiver.bandwidth_ghz)} GHz`;
+  const light =
+    source.shape === "measured"
+      ? `measured${source.measured?.name ? ` (${source.measured.name})` : ""}`
+      : `${label(source.shape)}, ${brief(source.width_ghz)} GHz`;
+  const amplifier = (stage) => {
+    const { gain_db: gain } = study.experiment[stage] ?? {};
+    return amplifies(study.experiment[stage]) ? [`gain ${brief(gain)} dB`, ...on(stage)].join(", ") : "off";
+  };
+  const grid = ensemble.grid === "automatic" ? "chosen when run" : `${ensemble.samples} × ${brief(stepPs, 3)} ps`;
   return {
-    source: `${label(source.shape)}, ${brief(source.width_ghz)} GHz at ${brief(source.wavelength_nm)} nm`,
-    relation: label(relation.kind),
-    launch: `${power(launch.total_power_mw, powerUnit)}, ${brief(100 * launch.share_1, 3)} % in 1`,
-    line: `${spans}, ${brief(length)} km, ${fibre}`,
-    receiver: receiver.extinction_db === null ? filter : `${filter}, ${brief(receiver.extinction_db)} dB`,
-    ensemble: `${ensemble.samples} × ${brief(stepPs, 3)} ps, ±${brief(ensemble.standard_error_target)}`,
-    sweep: `${sweep.points} × ${swept?.title.toLowerCase() ?? sweep.parameter}, ${ends}`,
+    source: `${light} at ${brief(source.wavelength_nm)} nm`,
+    relation: [label(relation.kind), ...on("relation")].join(", "),
+    shaper: listed("shaper"),
+    booster: amplifier("booster"),
+    launch: [
+      power(launch.total_power_mw, powerUnit), `${brief(100 * launch.share_1, 3)} % in 1`, ...on("launch"),
+    ].join(", "),
+    line: lineSummary(line, parameters),
+    preamplifier: amplifier("preamplifier"),
+    receiver: receiverSummary(receiver, on("receiver"), label),
+    ensemble: `${grid}, ±${brief(ensemble.standard_error_target)}`,
+    sweep: sweepLine(study.sweep, { powerUnit, parameters }),
+    second: study.second ? sweepLine(study.second, { powerUnit, parameters }) : "none",
     variants: study.variants.map((variant) => variant.name).join(" · "),
   };
+}
+
+function writeAll(node, [key, ...rest], value) {
+  if (key === "*") node.forEach((item) => writeAll(item, rest, value));
+  else if (rest.length) writeAll(node[key], rest, value);
+  else node[key] = value;
+}
+
+/** An experiment with some parameters replaced, by path; * stands for every span. */
+export function withChanges(experiment, changes) {
+  const copy = structuredClone(experiment);
+  for (const [path, value] of Object.entries(changes)) writeAll(copy, path.split("."), value);
+  return copy;
 }
 
 /** Whether two studies are the same question. */

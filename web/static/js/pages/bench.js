@@ -5,18 +5,19 @@ import { api, identityIn, pages } from "../model/links.js";
 import { get, post } from "../model/requests.js";
 import { Run, TERMINAL } from "../model/run.js";
 import { sameStudy } from "../model/study.js";
+import { saveText } from "../plots/export.js";
 import { plotly } from "../plots/surface.js";
 import { find } from "./elements.js";
 import { StudyForm } from "./form.js";
 import { Results } from "./results.js";
-import { openPage, saveText, toast } from "./shell.js";
+import { openPage, toast } from "./shell.js";
 import { Status } from "./status.js";
 
 const EVENT_TYPES = ["state", "progress", "point", "map", "reset"];
 
 const data = JSON.parse(document.getElementById("bench-data").textContent);
 const form = new StudyForm(find(document, "study"), data);
-const results = new Results(find(document, "results"));
+const results = new Results(find(document, "results"), data.parameters);
 const status = new Status(find(document, "status"), () => follow());
 const runButton = find(document, "run");
 

@@ -3,11 +3,14 @@
 import { dbmFromMw, mwFromDbm, POWER_PATH, brief, plain } from "../model/quantities.js";
 import { applies, equivalentDispersion, interpret, read, summaries, write } from "../model/study.js";
 import { find, findAll, make, say, settled } from "./elements.js";
+import { GridChoice } from "./grid-choice.js";
 import { Spans } from "./spans.js";
+import { Spectrum } from "./spectrum.js";
+import { Switches } from "./switches.js";
 import { Variants } from "./variants.js";
 import { powerUnit } from "./shell.js";
 
-const SWEEP_ENDS = new Set(["sweep.start", "sweep.stop"]);
+const SWEEP_END = /^(sweep|second)\.(start|stop)$/;
 
 export class StudyForm {
   #data;
@@ -20,8 +23,11 @@ export class StudyForm {
     this.changed = () => {};
     this.study = structuredClone(data.defaults);
     this.#fillSweepChoice();
-    this.spans = new Spans(find(root, "spans"), this, data.span);
+    this.spans = new Spans(find(root, "spans"), this, data);
     this.variants = new Variants(find(root, "variants"), this);
+    this.spectrum = new Spectrum(find(root, "spectrum"), this);
+    this.switches = new Switches(root, this, data);
+    this.gridChoice = new GridChoice(root, this);
     root.addEventListener("input", (event) => this.#typed(event.target));
     root.addEventListener("change", (event) => this.#typed(event.target));
     find(root, "add-span").addEventListener("click", () => this.spans.add());
@@ -82,6 +88,14 @@ export class StudyForm {
     this.touched();
   }
 
+  /** Values of the study were set from elsewhere: show them. */
+  valuesSet() {
+    this.#faults.clear();
+    this.clearRefusals();
+    this.#show();
+    this.touched();
+  }
+
   /** A variant's own entry changed. */
   variantEdited() {
     this.clearRefusals();
@@ -96,10 +110,12 @@ export class StudyForm {
   };
 
   #fillSweepChoice() {
-    const select = this.root.querySelector('[data-path="sweep.parameter"]');
-    for (const { path, title, unit } of this.#data.parameters) {
-      const stage = path.split(".")[0];
-      select.append(make("option", { value: path }, `${stage}: ${title}${unit ? ` (${unit})` : ""}`));
+    for (const axis of ["sweep", "second"]) {
+      const select = this.root.querySelector(`[data-path="${axis}.parameter"]`);
+      for (const { path, title, unit } of this.#data.parameters.filter(({ swept }) => swept)) {
+        const stage = path.split(".")[0];
+        select.append(make("option", { value: path }, `${stage}: ${title}${unit ? ` (${unit})` : ""}`));
+      }
     }
   }
 
@@ -110,7 +126,13 @@ export class StudyForm {
   #inDbm(entry) {
     if (powerUnit.value !== "dBm") return false;
     if ("power" in entry.dataset) return true;
-    return SWEEP_ENDS.has(entry.dataset.path) && this.study.sweep.parameter === POWER_PATH;
+    return this.#sweepOfEnd(entry)?.parameter === POWER_PATH;
+  }
+
+  /** The sweep of which an entry is an end; null for every other entry. */
+  #sweepOfEnd(entry) {
+    const [, axis] = SWEEP_END.exec(entry.dataset.path) ?? [];
+    return axis ? this.study[axis] : null;
   }
 
   /** What an entry stands for just now: its bounds and unit, in the unit typed. */
@@ -119,8 +141,9 @@ export class StudyForm {
     let low = "low" in entry.dataset ? Number(entry.dataset.low) : null;
     let high = "high" in entry.dataset ? Number(entry.dataset.high) : null;
     let unit = unitIs;
-    if (SWEEP_ENDS.has(path)) {
-      const swept = this.#data.parameters.find((one) => one.path === this.study.sweep.parameter);
+    const sweep = this.#sweepOfEnd(entry);
+    if (sweep) {
+      const swept = this.#data.parameters.find((one) => one.path === sweep.parameter);
       if (swept) ({ low, high, unit } = swept);
     }
     if (this.#inDbm(entry)) {
@@ -142,7 +165,7 @@ export class StudyForm {
       write(this.study, path, inMw);
       if (value !== null && entry.dataset.alternative) this.#empty(path, entry.dataset.alternative);
     }
-    if (path === "sweep.parameter") this.#sweepChanged();
+    if (/^(sweep|second)\.parameter$/.test(path)) this.#sweepChanged(path.split(".")[0]);
     this.#showConditions();
     this.#showSummaries();
     this.touched();
@@ -158,12 +181,13 @@ export class StudyForm {
   }
 
   /** Another swept parameter has other units: take its present value's neighbourhood. */
-  #sweepChanged() {
-    const { sweep, experiment } = this.study;
+  #sweepChanged(axis) {
+    const { [axis]: sweep, experiment } = this.study;
     const present = read(experiment, sweep.parameter.replace("line.*", "line.0"));
     const swept = this.#data.parameters.find((one) => one.path === sweep.parameter);
     const defaults = this.#data.defaults.sweep;
-    if (sweep.parameter === defaults.parameter) Object.assign(sweep, defaults);
+    const { points } = sweep;
+    if (sweep.parameter === defaults.parameter) Object.assign(sweep, defaults, { points });
     else if (present) {
       const clip = (x) => Math.min(swept.high ?? x, Math.max(swept.low ?? x, x));
       const [start, stop] = [clip(present / 2), clip(present * 2)];
@@ -202,7 +226,7 @@ export class StudyForm {
   #showUnit(entry) {
     const field = entry.closest(".field");
     const unit = find(field, "unit");
-    if (!unit || !("power" in entry.dataset || SWEEP_ENDS.has(entry.dataset.path))) return;
+    if (!unit || !("power" in entry.dataset || SWEEP_END.test(entry.dataset.path))) return;
     const spec = this.#spec(entry);
     unit.textContent = spec.unit;
     const ends = [spec.low, spec.high].map((x) => (x === null ? "" : brief(x)));
@@ -211,7 +235,7 @@ export class StudyForm {
 
   /** Parameters that do not apply are hidden and hold their default. */
   #showConditions() {
-    const { sweep } = this.study;
+    const swept = [this.study.sweep.parameter, this.study.second?.parameter];
     for (const field of findAll(this.root, "field")) {
       const path = field.dataset.field;
       if (field.dataset.when) {
@@ -220,9 +244,12 @@ export class StudyForm {
         field.hidden = !shown;
       }
       const inside = path.replace(/^experiment\./, "").replace(/^line\.\d+\./, "line.*.");
-      field.classList.toggle("swept", inside === sweep.parameter);
+      field.classList.toggle("swept", swept.includes(inside));
     }
     for (const entry of this.#entries()) this.#showAlternative(entry);
+    this.switches.show();
+    this.spectrum.show();
+    this.spans.showKinds();
   }
 
   #toDefault(path) {
@@ -230,6 +257,7 @@ export class StudyForm {
     const value = read(this.#data.defaults, inDefaults) ?? null;
     write(this.study, path, value);
     const entry = this.root.querySelector(`[data-path="${path}"]`);
+    if (!entry) return;
     entry.value = value === null ? "" : plain(value);
     this.#mark(entry, null);
   }
@@ -272,10 +300,10 @@ export class StudyForm {
   }
 
   #reveal(place) {
-    place.closest("details.stage").open = true;
+    for (let box = place.closest("details"); box; box = box.parentElement.closest("details")) box.open = true;
     const entry =
       this.root.querySelector(`[data-path="${place.dataset.faultFor}"]`) ??
-      place.parentElement.querySelector("input, select, button");
+      place.parentElement.querySelector("input:not([hidden]), select, button");
     if (entry.dataset.path) entry.setAttribute("aria-invalid", "true");
     entry.focus();
     place.scrollIntoView({ block: "nearest" });

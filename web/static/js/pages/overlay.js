@@ -94,7 +94,16 @@ function valueText(value) {
   return typeof value === "string" ? value.replaceAll("_", " ") : JSON.stringify(value);
 }
 
-document.querySelector('[data-save="overlay"]').addEventListener("click", () => surface.save("overlay"));
+/** What the curves are and in what they differ, for the files that leave the page. */
+function about() {
+  const curves = overlay.curves.map(({ run }, index) => `${names[index]}: run ${run}`);
+  const differing = overlay.differences.map(({ path, unit, values }) =>
+    `${path}${unit ? ` (${unit})` : ""}: ${values.map(valueText).join("; ")}`);
+  return [...curves, ...differing];
+}
+
+document.querySelector('[data-save="overlay"]').addEventListener("click", () => surface.save("overlay", about()));
+document.querySelector('[data-csv="overlay"]').addEventListener("click", () => surface.saveData("overlay", about()));
 document.querySelector('[data-reset="overlay"]').addEventListener("click", () => surface.resetAxes());
 part("copy-link").addEventListener("click", copyLink);
 powerUnit.attach(part("power-unit"));

@@ -1,16 +1,20 @@
 // The results of one run: maps, the dip curve, and the plots of the point selected.
 
 import { Details } from "../model/details.js";
+import { parameterRows, parameterSentences } from "../model/parameters.js";
 import { brief, sweepAxis } from "../model/quantities.js";
-import * as figures from "../plots/curves.js";
-import { dipFigure } from "../plots/dip.js";
+import { overviewFigure, surfaceFigure } from "../plots/along.js";
+import { dipFigure, limitOf } from "../plots/dip.js";
 import { edges, EvolutionPlot } from "../plots/evolution.js";
 import { Surface } from "../plots/surface.js";
-import { find, findAll } from "./elements.js";
+import { find, findAll, say } from "./elements.js";
 import { Legend } from "./legend.js";
+import { PointPlots } from "./point-plots.js";
+import { fillChecks, fillInvariants, fillScales, fillWidths } from "./point-tables.js";
 import { Selection } from "./selection.js";
 import { fillReadout, fillRemarks, fillValues } from "./tables.js";
 import { powerUnit } from "./shell.js";
+import { Topics } from "./topics.js";
 
 const TABLES_MS = 500;
 // Length of the maps' close-up, in inverse widths of the source: some hundred domains.
@@ -22,29 +26,30 @@ export class Results {
   #mapShown = null;
   #tablesTimer = null;
 
-  constructor(root) {
-    this.root = root;
+  /** parameters: every parameter, as the page carries them. */
+  constructor(root, parameters) {
+    Object.assign(this, { root, parameters });
     const box = (key) => root.querySelector(`[data-plot="${key}"]`);
     const readout = find(root, "map-readout");
     this.maps = [0, 1, 2].map((plane) => new EvolutionPlot(box(`map-${plane}`), plane, readout));
     for (const map of this.maps) map.zoomed = (change) => this.#zoomTogether(map, change);
-    this.plots = { dip: new Surface(box("dip"), { intervalMs: 300 }) };
-    for (const key of ["cross", "auto", "spectra", "distance", "contrast", "durations", "overview", "difference"]) {
+    this.pointPlots = new PointPlots(root);
+    this.plots = { dip: new Surface(box("dip"), { intervalMs: 300 }), ...this.pointPlots.plots };
+    for (const key of ["overview", "surface", "difference"]) {
       this.plots[key] = new Surface(box(key), { intervalMs: 500 });
     }
     this.legend = new Legend(find(root, "legend"), () => this.#comparisonChanged());
     this.selection = new Selection(root, () => this.#selectionChanged());
+    this.topics = new Topics(root, () => this.#topicChanged());
     powerUnit.addEventListener("change", () => this.#run && this.#drawAll());
-    this.differences = find(root, "differences");
-    this.differences.addEventListener("toggle", () => this.#run && this.#drawDifferences());
-    this.overview = find(root, "overview");
-    this.overview.addEventListener("toggle", () => {
-      if (this.#run) this.#drawOverview();
-    });
+    this.layer = find(root, "map-layer");
+    this.layer.addEventListener("change", () => { this.maps[0].layer = Number(this.layer.value); });
     const whole = find(root, "whole-window");
     whole.addEventListener("change", () => this.#run && this.#frameMaps());
-    for (const button of findAll(root, "save")) {
-      button.addEventListener("click", () => this.#save(button.dataset.save));
+    for (const [act, name] of [["save", "save"], ["csv", "saveData"]]) {
+      for (const button of findAll(root, act)) {
+        button.addEventListener("click", () => this.#export(name, button.dataset[act]));
+      }
     }
     for (const button of findAll(root, "reset")) {
       button.addEventListener("click", () => this.#resetAxes(button.dataset.reset));
@@ -62,6 +67,7 @@ export class Results {
     this.#details = new Details(run, (kind, variant, point) => this.#arrived(kind, variant, point));
     this.selection.open(run, this.sweep);
     this.legend.show(run.variants.map(({ name }) => name), this.selection.hidden);
+    this.topics.show(this.selection.topic ?? this.topics.shown);
     this.#frameMaps();
     this.#drawAll();
   }
@@ -81,7 +87,7 @@ export class Results {
       if (this.selection.following) this.#followCurve();
       this.#drawDip();
       this.#drawDifferences();
-      this.#drawOverview();
+      this.#drawSurfaces();
       this.#details.stale();
       if (changed.some(({ has_map: has }) => has)) this.#drawMaps();
       this.#tablesSoon();
@@ -117,10 +123,17 @@ export class Results {
   #selectionChanged() {
     this.#drawDip();
     this.#drawDifferences();
-    this.#drawOverview();
+    this.#drawSurfaces();
     this.#drawMaps();
     this.#drawPoint();
     this.#wantDetails();
+  }
+
+  #topicChanged() {
+    this.selection.topic = this.topics.shown === this.topics.usual ? null : this.topics.shown;
+    this.selection.remember();
+    this.#wantDetails();
+    this.#drawPoint();
   }
 
   #comparisonChanged() {
@@ -138,7 +151,7 @@ export class Results {
     this.#drawDip();
     this.#drawPoint();
     this.#drawDifferences();
-    this.#drawOverview();
+    this.#drawSurfaces();
     this.#wantDetails();
     this.#tables();
   }
@@ -150,7 +163,11 @@ export class Results {
   #wantDetails() {
     const { variant, point } = this.selection;
     const variants = [...new Set([variant, ...this.#shownVariants()])];
-    this.#details.want(variants.map((one) => [one, point]));
+    const here = variants.map((one) => [one, point]);
+    const all = PointPlots.needsSweep(this.topics.shown)
+      ? this.#shownVariants().flatMap((one) => this.sweep.values.map((_, i) => [one, i]))
+      : [];
+    this.#details.want([...here, ...all]);
   }
 
   /** C12(0) at the distance selected, in the shape of a summary; the end of the line has its own. */
@@ -164,6 +181,7 @@ export class Results {
       standard_error: summary.along.standard_error[distance],
       discretization_error: null,
       linear: null,
+      limited_by: "",
     };
   }
 
@@ -184,26 +202,31 @@ export class Results {
   /** Each variant minus the first, with the standard error of the difference itself. */
   #drawDifferences() {
     const { sweep } = this;
-    const [first] = this.#run.variants;
-    this.differences.hidden = this.#run.variants.length < 2;
-    if (!this.differences.open || this.differences.hidden) return;
-    const curves = this.#shownVariants().filter((variant) => variant > 0).map((variant) => ({
+    const { variant: chosen, point } = this.selection;
+    const first = this.#run.firstOf(chosen);
+    const panel = this.root.querySelector('[data-panel="difference"]');
+    panel.hidden = this.#run.variants.length / this.#run.seconds < 2;
+    if (panel.hidden) return;
+    const curves = this.#shownVariants().filter((variant) => variant !== this.#run.firstOf(variant)).map((variant) => ({
       name: this.#run.variants[variant].name,
       index: variant,
       x: sweep.values,
-      points: sweep.values.map((_, point) => this.#differenceAt(variant, point)),
+      points: sweep.values.map((_, i) => this.#differenceAt(variant, i)),
     }));
-    this.#note("difference", `from ${first.name}, at the end of the line`);
-    const where = ` − C12(0) of ${first.name}`;
-    this.plots.difference.draw(() => dipFigure({ curves, sweep, mark: sweep.values[this.selection.point], where }));
+    const single = this.#run.seconds === 1;
+    const name = single ? this.#run.variants[first].name : "the first variant";
+    this.#note("difference", `from ${name}, at the end of the line`);
+    const where = ` − C12(0) of ${name}`;
+    this.plots.difference.draw(() => dipFigure({ curves, sweep, mark: sweep.values[point], where }));
   }
 
   /** A paired difference in the shape of a summary; null where there is none yet. */
   #differenceAt(variant, point) {
     const own = this.#run.summary(variant, point);
     if (!own?.difference) return null;
-    const first = this.#run.summary(0, point);
-    return { ...own, ...own.difference, discretization_error: null, linear: own.linear - first.linear };
+    const first = this.#run.summary(this.#run.firstOf(variant), point);
+    const linear = first ? own.linear - first.linear : null;
+    return { ...own, ...own.difference, discretization_error: null, linear, limited_by: "" };
   }
 
   #drawMaps() {
@@ -231,41 +254,66 @@ export class Results {
   }
 
   #drawPoint() {
-    const { axes } = this.#run;
     const { variant, point } = this.selection;
-    const own = this.#run.detail(variant, point);
-    const shown = this.#shownVariants().flatMap((index) => {
-      const detail = this.#run.detail(index, point);
-      return detail ? [{ index, name: this.#run.variants[index].name, detail }] : [];
-    });
-    const name = this.#run.variants[variant].name;
     const at = this.sweep.text(point);
-    for (const key of ["auto", "spectra"]) this.#note(key, `${name} at ${at}`);
-    for (const key of ["cross", "distance", "contrast", "durations"]) this.#note(key, `at ${at}`);
     const summary = this.#run.summary(variant, point);
     const flagged = summary && summary.outcome !== "completed";
-    const instead = flagged ? `flagged: ${summary.outcome.replaceAll("_", " ")}` : "not computed yet";
-    const draw = (key, ready, make) => (ready ? this.plots[key].draw(make) : this.plots[key].clear(instead));
-    draw("cross", shown.length, () => figures.crossFigure(axes, shown));
-    draw("auto", own, () => figures.autoFigure(axes, own));
-    draw("spectra", own, () => figures.spectraFigure(axes, own));
-    const lines = this.#shownVariants().flatMap((index) => {
-      const one = this.#run.summary(index, point);
-      if (one?.outcome !== "completed") return [];
-      const distances = this.#run.distances(index, point);
-      return [{ index, name: this.#run.variants[index].name, distances, summary: one }];
+    const named = (index) => ({
+      index, name: this.#run.variants[index].name, distances: this.#run.distances(index, point),
     });
-    draw("distance", lines.length, () => figures.distanceFigure(lines, this.selection.km));
-    draw("contrast", shown.length, () => figures.contrastFigure(axes, shown));
-    draw("durations", shown.length, () => figures.durationsFigure(axes, shown));
-    find(this.root, "readout-note").textContent = `at ${at}`;
-    fillReadout(find(this.root, "readout"), this.#shownVariants().map((index) => ({
-      name: this.#run.variants[index].name, detail: this.#run.detail(index, point),
+    const variants = this.#shownVariants();
+    const own = this.#run.detail(variant, point);
+    this.pointPlots.draw({
+      axes: this.#run.axes,
+      sweep: this.sweep,
+      mark: this.sweep.values[point],
+      km: this.selection.km,
+      at,
+      name: this.#run.variants[variant].name,
+      distances: this.#run.distances(variant, point),
+      instead: flagged ? `flagged: ${summary.outcome.replaceAll("_", " ")}` : "not computed yet",
+      own: own?.correlations ? own : null,
+      shown: variants.map((index) => ({ ...named(index), detail: this.#run.detail(index, point) }))
+        .filter(({ detail }) => detail?.correlations),
+      curves: variants.map((index) => ({
+        ...named(index),
+        details: this.sweep.values.map((_, i) => this.#run.detail(index, i)),
+        summaries: this.sweep.values.map((_, i) => this.#run.summary(index, i)),
+      })),
+    });
+    this.#fillTables(own, at);
+    this.#drawVerdict(own, summary, at);
+  }
+
+  /** What limits the point selected, in words under its curve. */
+  #drawVerdict(own, summary, at) {
+    const words = own?.budget?.verdict;
+    const limit = summary && summary.outcome === "completed" ? limitOf(summary) : "";
+    const text = words ?? (limit && `Limited by ${limit}.`);
+    const name = this.#run.variants[this.selection.variant].name;
+    say(find(this.root, "verdict"), text ? `${name} at ${at}: ${text}` : "");
+  }
+
+  #fillTables(own, at) {
+    const name = this.#run.variants[this.selection.variant].name;
+    const none = own ? "This run does not hold it." : "Not computed yet.";
+    for (const [key, fill, found] of [
+      ["widths", fillWidths, own?.widths],
+      ["checks", fillChecks, own?.budget?.checks],
+      ["invariants", fillInvariants, own?.invariants],
+      ["scales", fillScales, own?.scales],
+    ]) {
+      this.#note(key, `${name} at ${at}`);
+      fill(this.root.querySelector(`table[data-${key}]`), found, none);
+    }
+    this.#note("readout", `at ${at}`);
+    fillReadout(this.root.querySelector("table[data-readout]"), this.#shownVariants().map((index) => ({
+      name: this.#run.variants[index].name, detail: this.#run.detail(index, this.selection.point),
     })));
   }
 
-  #drawOverview() {
-    if (!this.overview.open) return;
+  /** C12(0) over the sweep and the distance, and over both sweeps where there are two. */
+  #drawSurfaces() {
     const { variant } = this.selection;
     const { sweep } = this;
     this.#note("overview", this.#run.variants[variant].name);
@@ -273,7 +321,14 @@ export class Results {
     const shares = sweep.values.some((_, i) => this.#run.stretch(variant, i) !== 1);
     const whole = this.#run.lengthKm;
     const places = this.#run.axes.distance_km.map((z) => (shares ? z / whole : z));
-    this.plots.overview.draw(() => figures.overviewFigure(places, sweep, rows, { shares }));
+    this.plots.overview.draw(() => overviewFigure(places, sweep, rows, { shares }));
+    const { second } = this.#run.axes;
+    this.root.querySelector('[data-panel="surface"]').hidden = !second;
+    if (!second) return;
+    const curves = this.#run.siblingsOf(variant);
+    const over = sweep.values.map((_, i) => curves.map((curve) => this.#summaryAt(curve, i)?.value ?? null));
+    this.#note("surface", `at ${brief(this.selection.km)} km`);
+    this.plots.surface.draw(() => surfaceFigure(sweep, sweepAxis(second, powerUnit.value), over));
   }
 
   #note(panel, text) {
@@ -315,9 +370,21 @@ export class Results {
     Promise.all(others.map((map) => map.surface.relayout(axes))).finally(() => { this.zooming = false; });
   }
 
-  #save(key) {
+  /** Save a plot's data or drawing, with the parameters that it was made with. */
+  #export(act, key) {
     const title = this.#run.row.title.replace(/[^\p{L}\p{N} _.-]/gu, "").trim() || this.#run.id;
-    this.plots[key].save(`${title} ${key}`);
+    const { variant, point } = key === "map" ? this.#mapShown ?? this.selection : this.selection;
+    const experiment = this.#run.experimentAt(variant, point);
+    const name = this.#run.variants[variant].name;
+    const curves = this.#run.variants.map((one) => one.name).join("; ");
+    const about = [
+      `${this.#run.row.title} (run ${this.#run.id}), ${name} at ${this.sweep.text(point)}`,
+      `curves: ${curves}; sweep: ${this.sweep.title} ${this.sweep.text(0)} to ${this.sweep.text(this.sweep.values.length - 1)}`,
+    ];
+    const words = act === "save" ? parameterSentences : parameterRows;
+    const plot = key === "map" ? this.maps[0] : this.plots[key];
+    const target = key === "map" && act === "save" ? plot.surface : plot;
+    target[act](`${title} ${key}`, [...about, ...words(experiment, this.parameters)]);
   }
 
   #resetAxes(key) {

@@ -8,6 +8,7 @@ export class Selection {
   point = 0;
   distance = 0;
   hidden = new Set();
+  topic = null;
   #run = null;
 
   /** changed() is called when somebody moves to another point. */
@@ -43,6 +44,7 @@ export class Selection {
     this.point = within("point", last.point, start.point);
     this.distance = within("distance", last.distance, last.distance);
     this.hidden = new Set((asked.get("hidden") ?? "").split(",").filter(Boolean).map(Number));
+    this.topic = asked.get("topic");
     this.part("follow").checked = !asked.has("point");
     this.part("pick-variant").replaceChildren(
       ...run.variants.map(({ name }, index) => make("option", { value: index }, name)),
@@ -89,6 +91,7 @@ export class Selection {
   remember() {
     const asked = new URLSearchParams({ variant: this.variant, point: this.point });
     if (!this.atEnd) asked.set("distance", this.distance);
+    if (this.topic) asked.set("topic", this.topic);
     if (this.hidden.size) asked.set("hidden", [...this.hidden].join(","));
     history.replaceState(history.state, "", `#${asked}`);
   }

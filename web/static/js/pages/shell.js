@@ -117,10 +117,3 @@ export async function copyLink() {
   }
   toast("Link copied.");
 }
-
-/** Save a text as a file. */
-export function saveText(text, filename, type) {
-  const url = URL.createObjectURL(new Blob([text], { type }));
-  make("a", { href: url, download: filename }).click();
-  setTimeout(() => URL.revokeObjectURL(url), 1000);
-}

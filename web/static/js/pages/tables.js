@@ -1,6 +1,7 @@
 // Numbers of a run in tables: the readout of one point, the curve's values, the remarks.
 
 import { brief, withError } from "../model/quantities.js";
+import { limitOf } from "../plots/dip.js";
 import { make } from "./elements.js";
 
 const heading = (text, scope) => make("th", { scope }, text);
@@ -10,10 +11,16 @@ const milliwatts = (watts) => `${brief(1e3 * watts, 4)} mW`;
 const READOUT = [
   ["C12(0)", ({ summary }) => withError(summary.value, summary.standard_error)],
   ["Discretization error", ({ summary }) => brief(summary.discretization_error, 2)],
+  ["Limited by", ({ summary }) => limitOf(summary) || "–"],
   ["Linear regime", ({ summary }) => brief(summary.linear, 3)],
   ["⟨I1 I2⟩/(⟨I1⟩⟨I2⟩)", ({ moment_cross: m }) => withError(m.value, m.standard_error)],
   ["Walls", ({ walls_per_ns: w }) => withError(w.value, w.standard_error, "/ns")],
   ["Mean domain duration", ({ mean_duration_ps: d }) => withError(d.value, d.standard_error, "ps")],
+  ["Wall width", ({ wall_width_ps: w }) => (w ? withError(w.value, w.standard_error, "ps") : "–")],
+  ["Degree of polarization", ({ polarization: p }) => {
+    const degree = p?.received?.degree;
+    return degree ? withError(degree.value, degree.standard_error) : "–";
+  }],
   ["Launched, component 1", ({ energy }) => milliwatts(energy.launched_1_w)],
   ["Launched, component 2", ({ energy }) => milliwatts(energy.launched_2_w)],
   ["Received, component 1", ({ energy }) => milliwatts(energy.received_1_w)],
@@ -28,7 +35,7 @@ export function fillReadout(table, columns) {
   const head = make("tr", {}, heading("", "col"), ...columns.map(({ name }) => heading(name, "col")));
   const rows = READOUT.map(([title, cell]) =>
     make("tr", {}, heading(title, "row"),
-      ...columns.map(({ detail }) => make("td", {}, detail ? cell(detail) : "–"))),
+      ...columns.map(({ detail }) => make("td", {}, detail?.energy ? cell(detail) : "–"))),
   );
   table.replaceChildren(make("thead", {}, head), make("tbody", {}, ...rows));
 }

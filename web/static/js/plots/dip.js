@@ -12,6 +12,15 @@ function symbolOf(shape, summary) {
 
 const drawable = (summary) => summary !== null && summary.outcome === "completed" && summary.value !== null;
 
+/** What limits a point: what the server says, else the larger of the two errors. */
+export function limitOf({ limited_by: said, standard_error: chance, discretization_error: steps }) {
+  if (said !== undefined) return said;
+  if (chance === null || steps === null) return "";
+  return steps > chance ? "steps" : "statistics";
+}
+
+const limitText = (summary) => (limitOf(summary) ? `<br>limited by ${limitOf(summary)}` : "");
+
 function valueTraces(curve) {
   const colour = variantColour(theme.name, curve.index);
   const shape = variantMarker(curve.index);
@@ -61,13 +70,21 @@ function valueTraces(curve) {
         line: { color: colour, width: 1.6 },
       },
       error_y: bars("standard_error", 2.4, 4),
+      meta: {
+        columns: {
+          "standard error": shown.map((one) => one?.standard_error ?? null),
+          "discretization error": shown.map((one) => one?.discretization_error ?? null),
+          "limited by": shown.map((one) => one && limitOf(one)),
+        },
+      },
       customdata: shown.map((one) => [
         one?.standard_error ?? 0, one?.discretization_error ?? 0, one?.realizations ?? 0,
+        one ? limitText(one) : "",
       ]),
       hovertemplate:
         "%{x:.4g} → %{y:.4f}<br>standard error %{customdata[0]:.4f}<br>" +
         "discretization error %{customdata[1]:.1e}<br>%{customdata[2]} realizations" +
-        "<extra>%{fullData.name}</extra>",
+        "%{customdata[3]}<extra>%{fullData.name}</extra>",
     },
   ];
 }

@@ -2,8 +2,9 @@
 // image: axes, zoom and hover stay the plotting library's, at a fraction of its redraw cost.
 
 import { CONTRAST_MAP, INTENSITY_MAPS, scaleOf } from "../model/colour.js";
-import { nearest } from "../model/evolution.js";
+import { isIntensity, nearest } from "../model/evolution.js";
 import { brief } from "../model/quantities.js";
+import { csv, saveText } from "./export.js";
 import { axis, Surface } from "./surface.js";
 import { token } from "./theme.js";
 
@@ -11,6 +12,8 @@ const KINDS = [
   { title: "Contrast", colours: CONTRAST_MAP, intervalMs: 80 },
   { title: "I1 (mW)", colours: INTENSITY_MAPS[0], intervalMs: 400 },
   { title: "I2 (mW)", colours: INTENSITY_MAPS[1], intervalMs: 400 },
+  { title: "S2/S0", colours: CONTRAST_MAP, intervalMs: 400 },
+  { title: "S3/S0", colours: CONTRAST_MAP, intervalMs: 400 },
 ];
 
 // Peaks of thermal light reach far above its mean: the top colour stands for half the full scale
@@ -42,11 +45,12 @@ export class EvolutionPlot {
   #timer = null;
   #span = null;
 
-  /** plane: 0 contrast, 1 and 2 the intensities; readout: element that tells what is under the pointer. */
+  /**
+   * plane: 0 contrast, 1 and 2 the intensities, 3 and 4 the other Stokes ratios; readout: element
+   * that tells what is under the pointer.
+   */
   constructor(element, plane, readout) {
-    this.plane = plane;
-    this.kind = KINDS[plane];
-    this.words = words(this.kind.colours, plane === 0 ? 1 : INTENSITY_CEILING);
+    this.#choose(plane);
     this.surface = new Surface(element);
     this.readout = readout;
     this.zoomed = () => {};
@@ -72,6 +76,35 @@ export class EvolutionPlot {
     }
   }
 
+  /** Show another quantity of the map. */
+  set layer(plane) {
+    this.#choose(plane);
+    this.#painted.fill(0);
+    if (!this.#map) return;
+    this.#canvas.width = this.#map.columns;
+    this.#paint();
+    this.surface.draw(() => this.#figure());
+  }
+
+  #choose(plane) {
+    this.plane = plane;
+    this.kind = KINDS[plane];
+    this.words = words(this.kind.colours, isIntensity(plane) ? INTENSITY_CEILING : 1);
+  }
+
+  /** Save the quantity shown as a CSV file: a row for each distance, a column for each time. */
+  saveData(filename, comments) {
+    if (!this.#map) return;
+    const unit = isIntensity(this.plane) ? 1e3 : 1;
+    const rows = this.#distances.map((km, row) => [km, ...this.#times.map((_, column) => {
+      const value = this.#map.at(this.plane, row, column);
+      return value === null ? null : Number((unit * value).toPrecision(4));
+    })]);
+    const heads = ["distance (km) \\ time (ps)", ...this.#times];
+    const said = [...comments, `values: ${this.kind.title}`];
+    saveText(csv(said, heads, rows), `${filename}.csv`, "text/csv");
+  }
+
   /** The stretch of time in view, [from, to] in ps. */
   set span(span) {
     this.#span = span;
@@ -93,6 +126,7 @@ export class EvolutionPlot {
     const context = this.#canvas.getContext("2d");
     let changed = false;
     if (scale !== this.scalePainted) this.#painted.fill(0);
+    if (this.plane >= this.#map.planes) return false;
     this.scalePainted = scale;
     for (let row = 0; row < rows; row += 1) {
       if (this.#painted[row] === filled[row]) continue;
@@ -113,7 +147,7 @@ export class EvolutionPlot {
     const [z0, z1] = edges(distances);
     const limits = { range: this.#span ?? [t0, t1], minallowed: t0, maxallowed: t1 };
     const ceilingMw = 255e3 * INTENSITY_CEILING * this.#map.scale || 1;
-    const bounds = this.plane === 0 ? [-1, 1] : [0, ceilingMw];
+    const bounds = isIntensity(this.plane) ? [0, ceilingMw] : [-1, 1];
     this.scaleShown = this.#map.scale;
     const corners = {
       type: "heatmap", x: [t0, t1], y: [z0, z1], z: [[0, 0], [0, 0]],
@@ -133,7 +167,7 @@ export class EvolutionPlot {
     return {
       traces: [corners, bar],
       layout: {
-        margin: { l: 50, r: 8, t: 10, b: 38 },
+        margin: { l: 50, r: 78, t: 10, b: 38 },
         xaxis: axis("Time (ps)", { ...limits, showgrid: false, zeroline: false }),
         yaxis: axis("Distance (km)", {
           range: [distances[0], distances.at(-1)], nticks: 5, showgrid: false, zeroline: false,
@@ -154,7 +188,7 @@ export class EvolutionPlot {
   #ticks([low, high]) {
     const tickvals = [0, 0.25, 0.5, 0.75, 1].map((share) => low + share * (high - low));
     const ticktext = tickvals.map((value) => brief(value, 2));
-    if (this.plane !== 0) ticktext[4] = `≥${ticktext[4]}`;
+    if (isIntensity(this.plane)) ticktext[4] = `≥${ticktext[4]}`;
     return { tickmode: "array", tickvals, ticktext };
   }
 

@@ -1,6 +1,7 @@
 // One plot on the page: loads the library when first needed, redraws at a bounded rate and only
 // while in sight, follows the theme and its box, and exports itself.
 
+import { csvOfFigure, saveText, wrapped } from "./export.js";
 import { theme, token } from "./theme.js";
 
 let library = null;
@@ -21,6 +22,12 @@ export function plotly() {
 const REST_FOR_WORK = 8;
 
 const CONFIG = { displayModeBar: false, responsive: false, doubleClick: "reset" };
+
+const DRAWING = { width: 900, height: 560 };
+// Words under a drawing: where they begin below the axis, and how far apart the lines are.
+const FOOT = { top: 58, line: 13.5, size: 10 };
+
+const escaped = (text) => text.replaceAll("&", "&amp;").replaceAll("<", "&lt;");
 
 export function axis(title, more = {}) {
   return {
@@ -162,16 +169,31 @@ export class Surface {
     if (this.#drawn) await (await plotly()).relayout(this.element, change);
   }
 
-  /** Save the plot as it stands, with a legend, as an SVG file. */
-  async save(filename) {
+  /** Save exactly what is drawn as a CSV file under comment lines. */
+  saveData(filename, comments) {
+    if (this.#drawn) saveText(csvOfFigure(this.#drawn(), comments), `${filename}.csv`, "text/csv");
+  }
+
+  /** Save the plot as it stands as an SVG file, with a legend and sentences printed under it. */
+  async save(filename, foot = []) {
     if (!this.#drawn) return;
     const library = await plotly();
     const { traces, layout } = this.#drawn();
-    const copy = { ...baseLayout(), ...layout, showlegend: true, width: 900, height: 560 };
+    const lines = wrapped(foot);
+    const height = DRAWING.height + FOOT.line * lines.length;
+    const named = traces.some(({ name }) => name) && !traces.every(({ type }) => type === "heatmap");
+    const copy = { ...baseLayout(), ...layout, showlegend: named, width: DRAWING.width, height };
     copy.paper_bgcolor = token("--panel");
-    copy.margin = { ...copy.margin, r: 20, t: 24 };
-    copy.legend = { orientation: "h", y: 1.02, yanchor: "bottom", x: 0, font: { size: 12 } };
-    const file = { format: "svg", width: 900, height: 560, filename };
+    copy.margin = {
+      ...copy.margin, l: Math.max(60, copy.margin.l), r: 20, t: layout.xaxis2 ? 60 : 24,
+      b: FOOT.top + FOOT.line * lines.length + 8,
+    };
+    copy.legend = { orientation: "h", y: layout.xaxis2 ? 1.12 : 1.02, yanchor: "bottom", x: 0, font: { size: 12 } };
+    copy.annotations = [{
+      text: lines.map(escaped).join("<br>"), xref: "paper", yref: "paper", x: 0, y: 0, xanchor: "left", yanchor: "top",
+      xshift: 12 - copy.margin.l, yshift: -FOOT.top, align: "left", showarrow: false, font: { size: FOOT.size },
+    }];
+    const file = { format: "svg", width: DRAWING.width, height, filename };
     await library.downloadImage({ data: traces, layout: copy }, file);
   }
 
