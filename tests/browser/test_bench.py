@@ -64,8 +64,13 @@ def test_the_headline_study_at_a_reduced_ensemble_draws_itself(
         assert painted_share(page, plot) == 1.0
 
     page.locator('[data-plot="cross"]').scroll_into_view_if_needed()
-    wait_for_plot(page, "cross")
-    wait_for_values(page, "cross", "derivative, linear regime", 10)
+    until(
+        page,
+        """() => {
+            const traces = document.querySelector('[data-plot="cross"]').data ?? [];
+            return traces.some(({ name }) => name === "derivative, linear regime");
+        }""",
+    )
 
     with page.expect_download() as kept:
         page.locator('[data-download="result"]').click()
@@ -291,11 +296,10 @@ def test_the_difference_from_the_first_variant(page: Page, lab: LiveServer, done
     assert drawn == [point["difference"]["value"] for point in second]
     for value, one, other in zip(drawn, second, first, strict=True):
         assert other["difference"] is None
+        # Not to the digit: the light at the launch corrects a difference and its ends apart.
         if one["realizations"] == other["realizations"] == one["difference"]["realizations"]:
-            # A difference is controlled by both launches, the value of a curve by its own.
-            assert (
-                abs(value - (one["value"] - other["value"])) < one["difference"]["standard_error"]
-            )
+            error = one["difference"]["standard_error"]
+            assert value == pytest.approx(one["value"] - other["value"], abs=0.5 * error)
 
 
 def test_a_page_survives_the_server_being_killed_and_started_again(

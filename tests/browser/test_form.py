@@ -308,8 +308,7 @@ def test_a_spectrum_may_be_dropped_on_the_form(form: Page) -> None:
         """(box, text) => {
             const dataTransfer = new DataTransfer();
             dataTransfer.items.add(new File([text], "dropped.csv", { type: "text/csv" }));
-            const how = { dataTransfer, bubbles: true, cancelable: true };
-            box.dispatchEvent(new DragEvent("drop", how));
+            box.dispatchEvent(new DragEvent("drop", { dataTransfer, cancelable: true }));
         }""",
         ANALYSER,
     )

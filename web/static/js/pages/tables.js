@@ -21,6 +21,10 @@ const READOUT = [
     const degree = p?.received?.degree;
     return degree ? withError(degree.value, degree.standard_error) : "–";
   }],
+  ["Degree within the wall smoothing", ({ polarization: p }) => {
+    const degree = p?.local_degree;
+    return degree ? withError(degree.value, degree.standard_error) : "–";
+  }],
   ["Launched, component 1", ({ energy }) => milliwatts(energy.launched_1_w)],
   ["Launched, component 2", ({ energy }) => milliwatts(energy.launched_2_w)],
   ["Received, component 1", ({ energy }) => milliwatts(energy.received_1_w)],
