@@ -59,7 +59,8 @@ class Archive:
                 return read_result(self.path(record.id))
             except (OSError, ValueError, KeyError) as error:
                 raise NotFound(
-                    "the result file is missing or damaged: delete the run and run it again"
+                    "the result file is missing, damaged or of an earlier version: "
+                    "delete the run and run it again"
                 ) from error
         state = StudyState(Study.model_validate_json(record.study))
         for variant, point, arrays in self.checkpoints(record.id).load():

@@ -490,4 +490,5 @@ def _blamed_on(variant: int, study: Study) -> Iterator[None]:
             where = "sweep"
         elif study.second is not None and study.second.parameter in (path, anywhere):
             where = "second"
-        raise Contradiction(where, f"{path or 'experiment'}: {problem.get('msg', error)}") from None
+        said = str(problem.get("msg", error)).removeprefix("Value error, ")
+        raise Contradiction(where, f"{path or 'experiment'}: {said}") from None

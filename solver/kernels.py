@@ -145,20 +145,26 @@ def band_share(spectrum: Field, first: int, last: int) -> float:
 
 @njit(cache=True, fastmath={"contract", "reassoc"}, error_model="numpy")
 def column_powers(field: Field, columns: int) -> Real:
-    """Mean power of both components in equal parts of the window; float64, shape (2, columns).
+    """Mean power of both components about equally spaced times; float64, shape (2, columns).
 
-    field: complex, shape (2, samples), √W; columns divides samples.
+    field: complex, shape (2, samples), √W, periodic; columns divides samples. A column reaches
+    from its time half way to its neighbours', by the trapezoidal rule, so that it stands for the
+    same time whatever the samples.
     """
     samples = field.shape[1]
     width = samples // columns
+    half, end = width // 2, 0.5 if width % 2 == 0 else 1.0
     powers = np.empty((2, columns))
     for j in range(2):
         line = field[j]
         for column in range(columns):
             total = 0.0
-            for i in range(column * width, (column + 1) * width):
-                real, imag = np.float64(line[i].real), np.float64(line[i].imag)
-                total += real * real + imag * imag
+            for i in range(-half, half + 1):
+                at = column * width + i
+                a = line[at if at >= 0 else at + samples]
+                real, imag = np.float64(a.real), np.float64(a.imag)
+                weight = end if abs(i) == half else 1.0
+                total += weight * (real * real + imag * imag)
             powers[j, column] = total / width
     return powers
 
@@ -504,22 +510,27 @@ def spectral_lines(spectrum: Field, kept: int, density: Real, sums: Real) -> Non
 
 @njit(cache=True, fastmath={"contract", "reassoc"}, error_model="numpy")
 def column_stokes(field: Field, columns: int) -> Real:
-    """Means of |u|², |v|², S2 and S3 in equal parts of the window; float64, shape (4, columns).
+    """Means of |u|², |v|², S2 and S3 about equally spaced times; float64, shape (4, columns).
 
-    field: complex, shape (2, samples), √W; columns divides samples. Signs as in sphere_counts.
+    field: complex, shape (2, samples), √W, periodic; columns divides samples. Columns as in
+    column_powers, signs as in sphere_counts.
     """
     samples = field.shape[1]
     width = samples // columns
+    half, end = width // 2, 0.5 if width % 2 == 0 else 1.0
     means = np.empty((4, columns))
     for column in range(columns):
         p = q = s2 = s3 = 0.0
-        for i in range(column * width, (column + 1) * width):
-            ur, ui = np.float64(field[0, i].real), np.float64(field[0, i].imag)
-            vr, vi = np.float64(field[1, i].real), np.float64(field[1, i].imag)
-            p += ur * ur + ui * ui
-            q += vr * vr + vi * vi
-            s2 += 2.0 * (ur * vr + ui * vi)
-            s3 += 2.0 * (ur * vi - ui * vr)
+        for i in range(-half, half + 1):
+            at = column * width + i
+            at = at if at >= 0 else at + samples
+            weight = end if abs(i) == half else 1.0
+            ur, ui = np.float64(field[0, at].real), np.float64(field[0, at].imag)
+            vr, vi = np.float64(field[1, at].real), np.float64(field[1, at].imag)
+            p += weight * (ur * ur + ui * ui)
+            q += weight * (vr * vr + vi * vi)
+            s2 += weight * 2.0 * (ur * vr + ui * vi)
+            s3 += weight * 2.0 * (ur * vi - ui * vr)
         means[0, column], means[1, column] = p / width, q / width
         means[2, column], means[3, column] = s2 / width, s3 / width
     return means

@@ -42,7 +42,6 @@ MAP_ROWS = 64
 """Distances of an evolution map, the launch not counted."""
 MAP_COLUMNS = 1024
 FORMAT = "crossdip result 3"
-READABLE = {FORMAT, "crossdip result 2"}
 
 
 @dataclass(frozen=True)
@@ -73,7 +72,7 @@ class Axes:
             "relative_intensity": (layout.relative_intensity, "1"),
             "quadrature": (layout.quadrature, "1"),
             "map_distance_km": (np.linspace(0.0, length, MAP_ROWS + 1), "km"),
-            "map_time_ps": ((np.arange(columns) + 0.5) * ensemble.window_ps / columns, "ps"),
+            "map_time_ps": (np.arange(columns) * ensemble.window_ps / columns, "ps"),
         }
 
     def sweep(self) -> dict[str, Any]:
@@ -264,7 +263,7 @@ def read_result(path: Path) -> StudyResult:
     Raises OSError when it cannot be read, ValueError when it is not a result of this format.
     """
     with h5py.File(path, "r") as file:
-        if file.attrs.get("format") not in READABLE:
+        if file.attrs.get("format") != FORMAT:
             raise ValueError(f"{path.name} is not a result file of format {FORMAT!r}")
         study = Study.model_validate_json(str(file.attrs["study"]))
         points: list[list[PointResult | None]] = []

@@ -37,9 +37,18 @@ def band_share(spectrum: Array, first: int, last: int) -> float:
 
 
 def column_powers(field: Array, columns: int) -> Real:
-    """Mean power in equal parts of the window; shape (2, columns)."""
-    power = np.abs(np.asarray(field, dtype=np.complex128)) ** 2
-    return power.reshape(2, columns, -1).mean(axis=2)
+    """Mean power about equally spaced times; shape (2, columns)."""
+    return _columns(np.abs(np.asarray(field, dtype=np.complex128)) ** 2, columns)
+
+
+def _columns(values: Real, columns: int) -> Real:
+    """Trapezoidal means of periodic values, from half way before each time to half way after."""
+    width = values.shape[-1] // columns
+    half = width // 2
+    total = sum(np.roll(values, -i, axis=-1) for i in range(-half, half + 1))
+    if width % 2 == 0:
+        total = total - 0.5 * (np.roll(values, half, axis=-1) + np.roll(values, -half, axis=-1))
+    return np.asarray(total[..., ::width] / width)
 
 
 def intensity_moments(field: Array) -> Real:
@@ -173,9 +182,8 @@ def spectral_lines(spectrum: Array, kept: int, density: Real, sums: Real) -> Non
 
 
 def column_stokes(field: Array, columns: int) -> Real:
-    """Means of both powers, S2 and S3 in equal parts of the window; shape (4, columns)."""
-    found = stokes(field).reshape(4, columns, -1).mean(axis=2)
-    return np.concatenate([column_powers(field, columns), found[2:]])
+    """Means of both powers, S2 and S3 about equally spaced times; shape (4, columns)."""
+    return np.concatenate([column_powers(field, columns), _columns(stokes(field), columns)[2:]])
 
 
 @dataclass(frozen=True)
