@@ -107,7 +107,7 @@ def test_rows_of_the_map_and_points_of_the_curve_arrive_while_the_run_goes_on(
     expect(page.locator("[data-status-text]")).not_to_have_text(after)
 
     page.locator("[data-cancel]").click()
-    expect(state(page)).to_have_text("Cancelled", timeout=1500)
+    expect(state(page)).to_have_text("Cancelled", timeout=4000)
     expect(page.locator("[data-status-text]")).to_contain_text("is kept")
     page.locator("[data-resume]").click()
     expect(state(page)).to_have_text(re.compile("Queued|Running"))

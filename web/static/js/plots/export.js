@@ -62,5 +62,6 @@ export function saveText(text, filename, type) {
   link.href = url;
   link.download = filename;
   link.click();
-  setTimeout(() => URL.revokeObjectURL(url), 1000);
+  // A browser under load fetches it late.
+  setTimeout(() => URL.revokeObjectURL(url), 60_000);
 }
