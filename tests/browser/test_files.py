@@ -38,8 +38,11 @@ def _words(drawing: str) -> str:
 def test_every_plot_of_a_topic_is_saved_as_data_and_as_a_drawing(
     page: Page, done: str, topic: str
 ) -> None:
-    open_topic(page, done, topic)
-    for plot in PLOTS[topic]:
+    for place, plot in enumerate(PLOTS[topic]):
+        if place % 4 == 0:
+            # A browser asks a person before it saves more than ten files from one visit.
+            page.goto("about:blank")
+            open_topic(page, done, topic)
         drawn(page, plot)
         comments, heading, _ = _table(_saved(page, "csv", plot))
         assert "# launch.total_power_mw = 200 mW" in comments, plot

@@ -68,9 +68,11 @@ function take(own, type, event) {
 
 /** Read the run's view again, after a reset of the stream or at the run's end. */
 async function reread(own) {
+  const following = feed;
   try {
     const view = await get(api.view(own.id));
-    if (own !== run) return;
+    // A run that was taken up again meanwhile is further than this view.
+    if (own !== run || following !== feed) return;
     own.renew(view);
     status.refresh();
     results.renewed();
