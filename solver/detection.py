@@ -20,6 +20,7 @@ from solver.receiver import (
     demultiplexed,
     demultiplexing,
     is_filtered,
+    is_noisy,
     noise_of,
     noise_variance,
     noisy,
@@ -81,9 +82,8 @@ class Detection:
         self._optical = self._emission_w_per_thz > 0.0 or bool(experiment.preamplifier.bandpass_ghz)
         self._plain = not (
             self._optical
-            or self._draws_current
+            or is_noisy(receiver)
             or is_filtered(receiver)
-            or receiver.effective_bits is not None
             or receiver.sampling_gsps is not None
         )
         # What is linear in the powers is worked out from their spectra, which others need too.

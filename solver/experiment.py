@@ -192,6 +192,11 @@ class Experiment(Stage):
         )
 
     @property
+    def light(self) -> "Experiment":
+        """The same up to the end of the line, with nothing behind it."""
+        return self.model_copy(update={"preamplifier": Amplifier(), "receiver": Receiver()})
+
+    @property
     def length_km(self) -> float:
         """Length of the whole line, km."""
         return sum(span.length_km for span in self.line)

@@ -14,7 +14,7 @@ from itertools import pairwise
 import numpy as np
 
 from solver.chain import Chain
-from solver.experiment import Amplifier, Experiment, Receiver, Study
+from solver.experiment import Experiment, Study
 from solver.findings import Picture
 from solver.pairing import Difference, difference
 from solver.result import PointResult, StudyResult
@@ -182,8 +182,7 @@ def _families(chains: Sequence[Chain]) -> Iterator[Family]:
     """Chains sorted by their light, few enough of one light to be handled at once."""
     alike: dict[Experiment, list[Chain]] = {}
     for chain in chains:
-        behind = {"preamplifier": Amplifier(), "receiver": Receiver()}
-        alike.setdefault(chain.experiment.model_copy(update=behind), []).append(chain)
+        alike.setdefault(chain.experiment.light, []).append(chain)
     for group in alike.values():
         for start in range(0, len(group), MOST_BESIDE):
             yield Family(group[start : start + MOST_BESIDE])

@@ -101,8 +101,15 @@ def mean_powers_w(experiment: Experiment, grid: Grid) -> Real:
 def arriving_response(experiment: Experiment, grid: Grid) -> Complex:
     """Response at the end of the line with the Kerr term off; (fibres, 2, draws, samples).
 
-    One fibre, or those of the first FIBRES realizations where each has its own.
+    One fibre, or those of the first FIBRES realizations where each has its own. Not to be written
+    to: all who look at the same light share it.
     """
+    if grid.samples > KEPT_SAMPLES:
+        return _arriving_response(experiment, grid)
+    return _kept_response(experiment.light, grid)
+
+
+def _arriving_response(experiment: Experiment, grid: Grid) -> Complex:
     launched = input_response(experiment, grid)[None]
     seed, wavelength_nm = experiment.ensemble.seed, experiment.source.wavelength_nm
     if not fibres_are_drawn(experiment):
@@ -111,6 +118,9 @@ def arriving_response(experiment: Experiment, grid: Grid) -> Complex:
     count = min(FIBRES, fitting, experiment.ensemble.max_realizations)
     matrices = _fibre_matrices(experiment.line, grid, wavelength_nm, seed, count)
     return np.asarray(np.einsum("rjkf,kdf->rjdf", matrices, launched[0]))
+
+
+_kept_response = lru_cache(maxsize=2)(_arriving_response)
 
 
 @lru_cache(maxsize=4)
